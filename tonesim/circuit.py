@@ -1,0 +1,400 @@
+"""From a design to bare numbers: names, units and files end here.
+
+`lower` turns a checked ``Design`` into the kernel's parameter tuples; nothing else leaves this
+module. Equations of the load: Thiele-Small equivalent circuit (Small, J. Audio Eng. Soc. 20(5),
+1972) with a two-section ladder for the semi-inductance (Leach, J. Audio Eng. Soc. 50(6), 2002).
+"""
+
+import math
+from collections.abc import Sequence
+from typing import NamedTuple
+
+import numpy as np
+import numpy.typing as npt
+
+from tonesim.catalogue import Diode, Loudspeaker, OpAmp, Transistor
+from tonesim.design import BatterySupply, BenchSupply, Design, Multiplier, TransformerSupply
+from tonesim.kernel.devices import BipolarParams
+from tonesim.kernel.driver import DriverParams
+from tonesim.kernel.half import CHAIN_DROPS, CHAIN_MULTIPLIER, CHAIN_NONE, HalfParams
+from tonesim.kernel.load import LoadParams
+from tonesim.kernel.rails import RECTIFIED, RESISTIVE, STIFF, RailParams
+from tonesim.units import BOLTZMANN, ELEMENTARY_CHARGE, T0, ZERO_CELSIUS, kelvin, thermal_voltage
+
+Matrix = npt.NDArray[np.float64]
+
+REFERENCE_C = T0 - ZERO_CELSIUS  # of all part parameters
+NO_LIMIT = 1e9  # stands for "no current limit" [A]
+_DROP_LEAK_OHM = 1e9  # a junction without a stated leak
+_LEAST_OUTPUT_OHM = 30.0  # open-loop output resistance of any op-amp
+
+
+class Load(NamedTuple):
+    """Continuous state space of the load: ds/dt = A s + B v, i = C s + D v.
+
+    A Zobel network lies beside it.
+    """
+
+    a: Matrix
+    b: Matrix
+    c: Matrix
+    d: float
+    zobel_ohm: float = 0.0
+    zobel_f: float = 0.0  # 0: no network
+
+
+class Circuit(NamedTuple):
+    """A design in bare numbers, for any sample rate."""
+
+    upper: HalfParams
+    lower: HalfParams
+    driver: DriverParams
+    rail_positive: RailParams
+    rail_negative: RailParams
+    mains_hz: float
+    load: Load
+    bench_ohm: float  # resistor that stands for the load on the bench, ohm
+    gain: float  # volts at the op-amp's input per volt at the jack
+
+
+def saturation_current(
+    i_s: float, n: float, eg_ev: float, xti: float, temperature_c: float
+) -> float:
+    """Saturation current at a junction temperature.
+
+    Is(T) = Is(T0) (T/T0)^(X/n) exp((Eg q / (n k)) (1/T0 - 1/T)), the temperature law of
+    SPICE's diode and transistor models (Vladimirescu, "The SPICE Book", 1994).
+
+    Parameters
+    ----------
+    i_s : float
+        Saturation current at 25 degrees Celsius, in amperes.
+    n, eg_ev, xti : float
+        Emission coefficient, band gap in electronvolts, exponent X.
+    temperature_c : float
+
+    Returns
+    -------
+    float
+        Amperes.
+
+    Examples
+    --------
+    >>> round(saturation_current(1.0, 1.0, 1.12, 3.0, 35.0), 3)
+    4.543
+    """
+    t = kelvin(temperature_c)
+    per_kelvin = eg_ev * ELEMENTARY_CHARGE / (n * BOLTZMANN)
+    return i_s * (t / T0) ** (xti / n) * math.exp(per_kelvin * (1.0 / T0 - 1.0 / t))
+
+
+def _bipolar(
+    part: Transistor, i_s: float, hfe: float, knee: tuple[float, float], temperature_c: float
+) -> BipolarParams:
+    v_t = thermal_voltage(temperature_c)
+    warm = 1.0 + part.hfe_per_k * (temperature_c - REFERENCE_C)
+    return BipolarParams(
+        i_s=saturation_current(i_s, 1.0, part.eg_ev, part.xti, temperature_c),
+        n_vt=v_t,
+        v_t=v_t,
+        hfe=hfe * max(warm, 0.1),
+        i_k=knee[0],
+        m=knee[1],
+        beta_r=part.reverse_hfe,
+    )
+
+
+def _devices(
+    part: Transistor, temperature_c: float, hfe_factor: float, vbe_shift_v: float
+) -> tuple[BipolarParams, BipolarParams]:
+    """The device that carries the load current, and the one that drives it."""
+    i_s = part.is_a * math.exp(-vbe_shift_v / thermal_voltage(REFERENCE_C))
+    knee = (part.knee_a, part.knee_exponent)
+    device = _bipolar(part, i_s, part.hfe * hfe_factor, knee, temperature_c)
+    if part.kind != "darlington":
+        return device, device
+    assert part.first_is_a is not None and part.first_hfe is not None  # noqa: S101
+    assert part.first_knee_a is not None  # noqa: S101
+    first_knee = (part.first_knee_a, part.first_knee_exponent)
+    first = _bipolar(part, part.first_is_a, part.first_hfe * hfe_factor, first_knee, temperature_c)
+    return device, first
+
+
+def _chain(
+    diodes: Sequence[Diode], temperature_c: float
+) -> tuple[Matrix, Matrix, Matrix, float, float, float]:
+    """Drops grouped by type: count, Is, n Vt (smallest Is first), shift, series ohm, leak S."""
+    kinds: dict[tuple[float, float], float] = {}
+    shift = series = leak = 0.0
+    for d in diodes:
+        if d.slope_v_per_k is None:
+            i_s = saturation_current(d.is_a, d.n, d.eg_ev, d.xti, temperature_c)
+            n_vt = d.n * thermal_voltage(temperature_c)
+        else:
+            i_s, n_vt = d.is_a, d.n * thermal_voltage(REFERENCE_C)
+            shift += d.slope_v_per_k * (temperature_c - REFERENCE_C)
+        kinds[(i_s, n_vt)] = kinds.get((i_s, n_vt), 0.0) + 1.0
+        series += d.series_ohm
+        leak += d.leak_ohm if d.leak_ohm is not None else _DROP_LEAK_OHM
+    order = sorted(kinds)
+    return (
+        np.array([kinds[k] for k in order]),
+        np.array([k[0] for k in order]),
+        np.array([k[1] for k in order]),
+        shift,
+        series,
+        1.0 / leak if leak else 0.0,
+    )
+
+
+def lower_half(design: Design, upper: bool) -> HalfParams:
+    """Parameters of one half at its temperatures.
+
+    Parameters
+    ----------
+    design : Design
+    upper : bool
+        Upper half, or lower half with its signs mirrored.
+
+    Returns
+    -------
+    HalfParams
+    """
+    output, bias = design.output, design.bias
+    part = output.upper if upper else output.lower
+    hfe_factor = output.upper_hfe_factor if upper else output.lower_hfe_factor
+    vbe_shift_v = output.upper_vbe_shift_v if upper else output.lower_vbe_shift_v
+    device, first = _devices(part, output.temperature_c, hfe_factor, vbe_shift_v)
+    diodes = bias.upper if upper else bias.lower
+    multiplier: Multiplier | None = bias.upper_multiplied if upper else bias.lower_multiplied
+    feed = bias.upper_feed if upper else bias.lower_feed
+    count, i_s, n_vt, shift, series, leak = _chain(diodes, bias.temperature_c)
+    if multiplier is not None:
+        chain = CHAIN_MULTIPLIER
+        m = multiplier.part
+        spread, _ = _devices(m, bias.temperature_c, 1.0, 0.0)
+        r_cb, g_be = multiplier.collector_base_ohm, 1.0 / multiplier.base_emitter_ohm
+    else:
+        chain = CHAIN_DROPS if diodes else CHAIN_NONE
+        spread, r_cb, g_be = device, 1.0, 1.0
+    catch = output.catch_diode
+    v_t = thermal_voltage(REFERENCE_C)
+    return HalfParams(
+        darlington=part.kind == "darlington",
+        device=device,
+        first=first,
+        r_b=part.base_ohm,
+        r_e=part.emitter_ohm,
+        r_c=part.collector_ohm,
+        g_1=1.0 / part.first_base_emitter_ohm if part.first_base_emitter_ohm else 0.0,
+        g_2=1.0 / part.base_emitter_ohm if part.base_emitter_ohm else 0.0,
+        r_emitter=output.upper_emitter if upper else output.lower_emitter,
+        g_feed=1.0 / feed if feed else 0.0,
+        chain=chain,
+        chain_count=count if count.size else np.ones(1),
+        chain_is=i_s if count.size else np.ones(1),
+        chain_nvt=n_vt if count.size else np.ones(1),
+        chain_shift=shift,
+        chain_r=series,
+        chain_g=leak,
+        multiplier=spread,
+        r_cb=r_cb,
+        g_be=g_be,
+        catch=BipolarParams(catch.is_a, catch.n * v_t, v_t, 1.0, 1.0, 1.0, 1.0),
+        catch_r=catch.series_ohm,
+    )
+
+
+def lower_driver(design: Design) -> DriverParams:
+    """Op-amp and feedback network.
+
+    The two listed swings (into 10 kilohm and 2 kilohm) give the output resistance and the
+    voltage the stage behind it stops at, on either side.
+    """
+    driver = design.driver
+    part: OpAmp = driver.part
+    light, heavy = 10e3, 2e3
+
+    def resistance(swing_light: float, swing_heavy: float) -> float:
+        return (swing_light - swing_heavy) / (swing_heavy / heavy - swing_light / light)
+
+    sides = (
+        (part.swing_10k_positive_v, part.swing_2k_positive_v, part.source_limit_a),
+        (-part.swing_10k_negative_v, -part.swing_2k_negative_v, part.sink_limit_a),
+    )
+    r_out = max(
+        sum(resistance(s[0], s[1]) for s in sides) / len(sides),
+        _LEAST_OUTPUT_OHM,
+    )
+
+    def drop(swing_heavy: float, limit: float) -> float:
+        share = min(swing_heavy / heavy / limit, 0.99)
+        behind = swing_heavy + r_out * swing_heavy / heavy / math.sqrt(1.0 - share * share)
+        return part.at_rail_v - behind
+
+    own = driver.positive_v is not None
+    return DriverParams(
+        omega=2.0 * math.pi * part.gain_bandwidth_hz,
+        slew=part.slew_v_per_s,
+        per_a0=1.0 / part.dc_gain,
+        beta=driver.ground_leg_ohm / (driver.ground_leg_ohm + driver.feedback_ohm),
+        r_out=r_out,
+        i_source=part.source_limit_a,
+        i_sink=part.sink_limit_a,
+        drop_positive=drop(sides[0][1], sides[0][2]),
+        drop_negative=drop(sides[1][1], sides[1][2]),
+        own_supply=own,
+        rail_positive=driver.positive_v if driver.positive_v is not None else 0.0,
+        rail_negative=driver.negative_v if driver.negative_v is not None else 0.0,
+        offset=driver.offset_v if driver.offset_v is not None else 0.0,
+        i_quiescent=part.quiescent_a,
+    )
+
+
+def lower_rails(design: Design) -> tuple[RailParams, RailParams, float]:
+    """Both rails, as magnitudes, and the mains frequency in hertz (0: none)."""
+    supply = design.supply
+    if isinstance(supply, TransformerSupply):
+
+        def winding(v: float) -> RailParams:
+            return RailParams(
+                kind=RECTIFIED,
+                v_open=math.sqrt(2.0) * v * (1.0 + supply.regulation),
+                r_source=supply.winding_ohm + supply.bridge_ohm,
+                i_limit=NO_LIMIT,
+                c=supply.reservoir_f,
+                esr=supply.reservoir_esr_ohm,
+                v_diode=supply.bridge_drop_v,
+            )
+
+        return winding(supply.positive_winding), winding(supply.negative_winding), supply.mains_hz
+    if isinstance(supply, BatterySupply):
+        r, limit = supply.internal_ohm, None
+    else:
+        assert isinstance(supply, BenchSupply)  # noqa: S101
+        r, limit = supply.source_ohm, supply.current_limit_a
+
+    def source(v: float) -> RailParams:
+        stiff = r == 0.0 and limit is None
+        return RailParams(
+            kind=STIFF if stiff else RESISTIVE,
+            v_open=abs(v),
+            r_source=max(r, 1e-3),
+            i_limit=limit if limit is not None else NO_LIMIT,
+            c=supply.decoupling_f,
+            esr=0.0,
+            v_diode=0.0,
+        )
+
+    return source(supply.positive_v), source(supply.negative_v), 0.0
+
+
+def _loudspeaker(part: Loudspeaker) -> Load:
+    """States: currents of L1, L2, L3 and Lces, and the voltage on Cmes."""
+    l1, l2, l3 = part.l1_h, part.l2_h, part.l3_h
+    r2, r3, re = part.r2_ohm, part.r3_ohm, part.re_ohm
+    a = np.zeros((5, 5))
+    a[0] = [-(re + r2 + r3) / l1, r2 / l1, r3 / l1, -1.0 / l1, 0.0]
+    a[1, :2] = [r2 / l2, -r2 / l2]
+    a[2, [0, 2]] = [r3 / l3, -r3 / l3]
+    a[3, [0, 3, 4]] = [1.0 / part.cmes_f, -1.0 / (part.res_ohm * part.cmes_f), -1.0 / part.cmes_f]
+    a[4, 3] = 1.0 / part.lces_h
+    b = np.zeros(5)
+    b[0] = 1.0 / l1
+    c = np.zeros(5)
+    c[0] = 1.0
+    return Load(a, b, c, 0.0)
+
+
+def lower_load(design: Design) -> Load:
+    """Load with the feedback network across it, and the Zobel network beside it."""
+    load = design.load
+    if load.part is not None:
+        net = _loudspeaker(load.part)
+    else:
+        assert load.ohm is not None  # noqa: S101
+        net = Load(np.zeros((0, 0)), np.zeros(0), np.zeros(0), 1.0 / load.ohm)
+    d = net.d + 1.0 / (design.driver.feedback_ohm + design.driver.ground_leg_ohm)
+    return net._replace(d=d, zobel_ohm=load.zobel_ohm or 0.0, zobel_f=load.zobel_f or 0.0)
+
+
+def load_impedance(load: Load, frequency_hz: npt.ArrayLike) -> npt.NDArray[np.complex128]:
+    """Complex impedance of a load, in ohm.
+
+    Parameters
+    ----------
+    load : Load
+    frequency_hz : (N,) array_like
+
+    Returns
+    -------
+    (N,) ndarray of complex
+    """
+    s = 2j * np.pi * np.atleast_1d(np.asarray(frequency_hz, dtype=float))
+    eye = np.eye(load.b.size)
+    y = np.array([load.c @ np.linalg.solve(k * eye - load.a, load.b) + load.d for k in s])
+    if load.zobel_f:
+        y = y + 1.0 / (load.zobel_ohm + 1.0 / (s * load.zobel_f))
+    return np.asarray(1.0 / y)
+
+
+def load_resistance(load: Load) -> float:
+    """Resistance of a load at zero frequency, in ohm."""
+    if load.b.size == 0:
+        return 1.0 / load.d
+    return float(1.0 / (load.d - load.c @ np.linalg.solve(load.a, load.b)))
+
+
+def discretise_load(load: Load, dt: float) -> LoadParams:
+    """Step of a load by the trapezoidal rule (see kernel/load.py).
+
+    Parameters
+    ----------
+    load : Load
+    dt : float
+        Step in seconds.
+
+    Returns
+    -------
+    LoadParams
+    """
+    n = load.b.size
+    eye = np.eye(n)
+    inverse = np.linalg.inv(eye - 0.5 * dt * load.a) if n else eye
+    p = inverse @ (eye + 0.5 * dt * load.a)
+    q = 0.5 * dt * (inverse @ load.b)
+    zobel_k = 0.5 * dt / load.zobel_f if load.zobel_f else 0.0
+    zobel_g = 1.0 / (load.zobel_ohm + zobel_k) if load.zobel_f else 0.0
+    return LoadParams(
+        p=np.ascontiguousarray(p),
+        q=np.ascontiguousarray(q),
+        c=np.ascontiguousarray(load.c),
+        g=float(load.c @ q) + load.d + zobel_g,
+        zobel_g=zobel_g,
+        zobel_k=zobel_k,
+    )
+
+
+def lower(design: Design) -> Circuit:
+    """Lower a design to bare numbers.
+
+    Parameters
+    ----------
+    design : Design
+
+    Returns
+    -------
+    Circuit
+    """
+    positive, negative, mains_hz = lower_rails(design)
+    return Circuit(
+        upper=lower_half(design, upper=True),
+        lower=lower_half(design, upper=False),
+        driver=lower_driver(design),
+        rail_positive=positive,
+        rail_negative=negative,
+        mains_hz=mains_hz,
+        load=lower_load(design),
+        bench_ohm=design.load.bench_ohm,
+        gain=10.0 ** (design.input.gain_db / 20.0),
+    )

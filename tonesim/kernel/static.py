@@ -1,0 +1,113 @@
+"""The stage at rest: node equations without time, solved on the device laws themselves.
+
+No surface is used here, so idle and clip figures do not depend on the grid, and the sample
+loop can be checked against them.
+"""
+
+from typing import NamedTuple
+
+import numpy as np
+
+from tonesim.kernel.driver import output_current
+from tonesim.kernel.half import catch_current, first_guess, solve_half
+from tonesim.kernel.jit import kernel
+
+_CUTS = 100
+
+
+class StaticPoint(NamedTuple):
+    """A stage at rest, with its evidence."""
+
+    v_o: float
+    v_d: float
+    v_x: float
+    i_up: float  # what each half pushes into or pulls out of the output node
+    i_low: float
+    i_drive_up: float  # what each half's chain pushes into the drive node
+    i_drive_low: float
+    i_amp: float
+    imbalance: float  # larger of the two node currents left over, ampere
+    residual: float  # worst node equation inside a half
+
+
+@kernel
+def half_at_rest(u, h, collector_extra, p, x):
+    """A half's currents, catch diode included, from a start that always gets home."""
+    first_guess(u, h, p, x)
+    s = solve_half(u, h, h + collector_extra, p, x)
+    return s.i_out - catch_current(h, p), s.i_drive, s.residual
+
+
+@kernel
+def drive_at_rest(v_o, v_x, v_p, v_n, extra, upper, lower, q, x):
+    """v_d by bisection: the drive node's current falls as v_d rises."""
+    lo = -v_n - 10.0
+    hi = v_p + 10.0
+    for _ in range(_CUTS):
+        v_d = 0.5 * (lo + hi)
+        if v_d <= lo or v_d >= hi:
+            break
+        i, _g = output_current(v_x - v_d, q)
+        _a, b, _r = half_at_rest(v_d - v_o, v_p - v_o, extra, upper, x)
+        _c, d, _r2 = half_at_rest(v_o - v_d, v_o + v_n, extra, lower, x)
+        if i + b - d > 0.0:
+            lo = v_d
+        else:
+            hi = v_d
+    return 0.5 * (lo + hi)
+
+
+@kernel
+def driver_at_rest(v_in, v_o, v_p, v_n, q):
+    """v_x of an op-amp that has settled: A0 times its error, inside its swing."""
+    if q.own_supply:
+        top, bottom = q.rail_positive - q.drop_positive, q.rail_negative + q.drop_negative
+    else:
+        top, bottom = v_p - q.drop_positive, -v_n + q.drop_negative
+    return min(max((v_in + q.offset - q.beta * v_o) / q.per_a0, bottom), top)
+
+
+@kernel
+def solve_static(v_in, v_p, v_n, g_load, extra, upper, lower, q):
+    """Static solution for an input voltage.
+
+    Parameters
+    ----------
+    v_in : float
+        Volts at the op-amp's input; very large values ask for the clip level.
+    v_p, v_n : float
+        Magnitudes of the rails, volts.
+    g_load : float
+        Conductance from output to ground, siemens.
+    extra : float
+        Volts added to the rails at the collectors only (lifts saturation).
+    upper, lower : HalfParams
+    q : DriverParams
+
+    Returns
+    -------
+    StaticPoint
+    """
+    x = np.zeros(4)
+    lo = -v_n - 10.0
+    hi = v_p + 10.0
+    for _ in range(_CUTS):
+        v_o = 0.5 * (lo + hi)
+        if v_o <= lo or v_o >= hi:
+            break
+        v_x = driver_at_rest(v_in, v_o, v_p, v_n, q)
+        v_d = drive_at_rest(v_o, v_x, v_p, v_n, extra, upper, lower, q, x)
+        a, _b, _r = half_at_rest(v_d - v_o, v_p - v_o, extra, upper, x)
+        c, _d, _r2 = half_at_rest(v_o - v_d, v_o + v_n, extra, lower, x)
+        if a - c - g_load * v_o > 0.0:
+            lo = v_o
+        else:
+            hi = v_o
+    v_o = 0.5 * (lo + hi)
+    v_x = driver_at_rest(v_in, v_o, v_p, v_n, q)
+    v_d = drive_at_rest(v_o, v_x, v_p, v_n, extra, upper, lower, q, x)
+    a, b, r1 = half_at_rest(v_d - v_o, v_p - v_o, extra, upper, x)
+    c, d, r2 = half_at_rest(v_o - v_d, v_o + v_n, extra, lower, x)
+    i, _g = output_current(v_x - v_d, q)
+    imbalance = max(abs(a - c - g_load * v_o), abs(i + b - d))
+    return StaticPoint(v_o, v_d, v_x, a, c, b, d, i, imbalance, max(r1, r2))

@@ -1,0 +1,217 @@
+"""The output stage as a processor of blocks: volts at the jack in, volts across the load out.
+
+One implementation serves files, batches and live sound. Everything is fixed, compiled and
+allocated in `prepare`; `process` allocates nothing that grows, never raises on loud input and
+gives the same bits however the signal is cut.
+"""
+
+import math
+from dataclasses import dataclass
+
+import numpy as np
+
+from tonesim.circuit import Circuit, discretise_load, lower
+from tonesim.curve import OperatingPoint, Surfaces, build_surfaces, idle_point
+from tonesim.design import Design
+from tonesim.errors import SolverError, UsageError
+from tonesim.kernel import amplifier as loop
+from tonesim.kernel.amplifier import AmplifierParams, advance
+from tonesim.oversample import Oversampler, oversampling_factor
+from tonesim.signals import Signal
+
+TOLERANCE_V = 1e-3  # a Newton step below this is the last: what is left is its square
+_WARM_UP_S = 0.1  # silence run in `prepare`, so that the stage starts at rest
+_PREPARE_FIRST = "call prepare(sample_rate, block_size) before process"
+
+
+@dataclass(frozen=True)
+class Evidence:
+    """What the solver did since the last reset, and the extremes it met."""
+
+    steps: int
+    iterations: int
+    rescued_steps: int
+    unsettled_steps: int
+    worst_step_v: float
+    highest_v: float
+    lowest_v: float
+    lowest_positive_rail_v: float
+    lowest_negative_rail_v: float
+    supply_energy_j: float
+    load_energy_j: float
+    positive_charge_c: float
+    negative_charge_c: float
+
+    @property
+    def peak_v(self) -> float:
+        """Largest magnitude at the output, in volts."""
+        return max(self.highest_v, -self.lowest_v)
+
+
+class Amplifier:
+    """A design's output stage, one channel.
+
+    Parameters
+    ----------
+    design : Design
+    multiply : int, optional
+        Factor on the internal rate (a power of two), for accuracy beyond the default.
+    tolerance_v : float, optional
+        Last Newton step that counts as settled, in volts.
+    """
+
+    def __init__(self, design: Design, multiply: int = 1, tolerance_v: float = TOLERANCE_V) -> None:
+        self.design = design
+        self.circuit: Circuit = lower(design)
+        self.multiply = multiply
+        self.tolerance_v = tolerance_v
+        self.factor = 0
+        self.idle: OperatingPoint | None = None
+        self.surfaces: Surfaces | None = None
+        self._block = 0
+
+    def prepare(self, sample_rate: float, block_size: int) -> None:
+        """Fix rate and block size, build surfaces, compile, come to rest.
+
+        Parameters
+        ----------
+        sample_rate : float
+            Hertz.
+        block_size : int
+            Largest block `process` works on at once; longer ones are cut.
+
+        Raises
+        ------
+        SolverError
+            If the circuit cannot idle.
+        """
+        self.factor = oversampling_factor(sample_rate, multiply=self.multiply)
+        dt = 1.0 / (sample_rate * self.factor)
+        surfaces = build_surfaces(self.circuit)
+        idle = idle_point(self.circuit)
+        if not idle.converged:
+            raise SolverError(
+                f"design {self.design.title!r}: the stage finds no idle point "
+                f"(imbalance {idle.residual_a:.3g} A, expected below 1e-6 A)"
+            )
+        self.surfaces, self.idle = surfaces, idle
+        angle = 2.0 * math.pi * self.circuit.mains_hz * dt
+        self._params = AmplifierParams(
+            upper=surfaces.upper,
+            lower=surfaces.lower,
+            grid=surfaces.grid,
+            driver=self.circuit.driver,
+            load=discretise_load(self.circuit.load, dt),
+            rail_positive=self.circuit.rail_positive,
+            rail_negative=self.circuit.rail_negative,
+            mains_sin=math.sin(angle),
+            mains_cos=math.cos(angle),
+            dt=dt,
+            tolerance=self.tolerance_v,
+        )
+        self._oversampler = Oversampler(self.factor, block_size)
+        self._block = block_size
+        self._fast_in = np.zeros(block_size * self.factor)
+        self._fast_out = np.zeros(block_size * self.factor)
+        self._state = self._at_rest(idle)
+        self._evidence = np.zeros(loop.EVIDENCE_SIZE)
+        self._warm_up(dt)
+        self._rest = self._state.copy()
+        self.reset()
+
+    def _at_rest(self, idle: OperatingPoint) -> Signal:
+        """State array of the static idle point."""
+        load = self.circuit.load
+        state = np.zeros(loop.LOAD + load.b.size)
+        state[loop.O1 : loop.O3 + 1] = idle.output_v
+        state[loop.D1 : loop.D3 + 1] = idle.drive_v
+        state[loop.X1 : loop.X3 + 1] = idle.driver_v
+        state[loop.CAP_P] = idle.rail_positive.capacitor_v
+        state[loop.CAP_N] = idle.rail_negative.capacitor_v
+        state[loop.RAIL_P] = idle.rail_positive.mean_v
+        state[loop.RAIL_N] = idle.rail_negative.mean_v
+        state[loop.MAINS_COS] = 1.0
+        state[loop.ZOBEL_V] = idle.output_v
+        if load.b.size:
+            state[loop.LOAD :] = -np.linalg.solve(load.a, load.b) * idle.output_v
+        return state
+
+    def _warm_up(self, dt: float) -> None:
+        """Run silence: the last difference between static and moving solution dies here."""
+        n = self._fast_in.size
+        self._fast_in[:] = 0.0
+        for _ in range(max(1, math.ceil(_WARM_UP_S / (n * dt)))):
+            advance(self._fast_in, self._fast_out, self._state, self._evidence, self._params)
+
+    def process(self, block: Signal) -> Signal:
+        """Volts at the jack to volts across the load.
+
+        Parameters
+        ----------
+        block : (frames,) ndarray
+
+        Returns
+        -------
+        (frames,) ndarray
+
+        Raises
+        ------
+        UsageError
+            If `prepare` was not called.
+        """
+        if self._block == 0:
+            raise UsageError(_PREPARE_FIRST)
+        out = np.empty(block.shape[0])
+        for start in range(0, block.shape[0], self._block):
+            part = block[start : start + self._block] * self.circuit.gain
+            n = part.shape[0] * self.factor
+            self._oversampler.up(part, self._fast_in[:n])
+            advance(
+                self._fast_in[:n],
+                self._fast_out[:n],
+                self._state,
+                self._evidence,
+                self._params,
+            )
+            self._oversampler.down(self._fast_out[:n], out[start : start + self._block])
+        return out
+
+    def reset(self) -> None:
+        """Back to the state after `prepare`."""
+        if self._block == 0:
+            raise UsageError(_PREPARE_FIRST)
+        self._oversampler.reset()
+        self._state[:] = self._rest
+        self._evidence[:] = 0.0
+        self._evidence[loop.PEAK_P] = self._evidence[loop.PEAK_N] = self._state[loop.O1]
+        self._evidence[loop.LOW_P] = self._state[loop.RAIL_P]
+        self._evidence[loop.LOW_N] = self._state[loop.RAIL_N]
+
+    @property
+    def latency(self) -> int:
+        """Delay of the oversampling filters, in whole samples."""
+        if self._block == 0:
+            raise UsageError(_PREPARE_FIRST)
+        return self._oversampler.latency
+
+    @property
+    def evidence(self) -> Evidence:
+        """What the solver did since the last reset."""
+        if self._block == 0:
+            raise UsageError(_PREPARE_FIRST)
+        e, dt = self._evidence, self._params.dt
+        return Evidence(
+            steps=int(e[loop.STEPS]),
+            iterations=int(e[loop.ITERATIONS]),
+            rescued_steps=int(e[loop.RESCUED]),
+            unsettled_steps=int(e[loop.UNSETTLED]),
+            worst_step_v=float(e[loop.WORST_STEP]),
+            highest_v=float(e[loop.PEAK_P]),
+            lowest_v=float(e[loop.PEAK_N]),
+            lowest_positive_rail_v=float(e[loop.LOW_P]),
+            lowest_negative_rail_v=float(e[loop.LOW_N]),
+            supply_energy_j=float(e[loop.ENERGY_RAILS] * dt),
+            load_energy_j=float(e[loop.ENERGY_LOAD] * dt),
+            positive_charge_c=float(e[loop.CHARGE_P] * dt),
+            negative_charge_c=float(e[loop.CHARGE_N] * dt),
+        )
