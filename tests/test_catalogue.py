@@ -40,8 +40,11 @@ def single_law(part: Transistor, ic: float) -> tuple[float, float]:
 
 def darlington_law(part: Transistor, ic_total: float) -> tuple[float, float]:
     """VBE and IB of a Darlington with its two inner resistors, by bisection on both currents."""
-    assert part.first_is_a and part.first_hfe and part.first_knee_a
-    assert part.first_base_emitter_ohm and part.base_emitter_ohm
+    assert part.first_is_a is not None
+    assert part.first_hfe is not None
+    assert part.first_knee_a is not None
+    assert part.first_base_emitter_ohm is not None
+    assert part.base_emitter_ohm is not None
 
     def at(ic2: float) -> tuple[float, float, float]:
         vbe2, ib2 = single_law(part, ic2)
@@ -423,7 +426,7 @@ def test_names_are_found_whatever_their_capitals() -> None:
 @pytest.mark.parametrize(
     ("kind", "name", "words"),
     [
-        ("transistor", "TIP14C", ["no transistor", "'TIP14C'", "TIP41C"]),
+        ("transistor", "TIP124", ["no transistor", "'TIP124'", "TIP125"]),
         ("diode", "1N4184", ["no diode", "1N4148"]),
         ("opamp", "TL074", ["no op-amp", "TL072"]),
         ("loudspeaker", "12-inch-8ohm", ["no loudspeaker", "12-inch-8-ohm"]),
@@ -494,7 +497,7 @@ def test_a_part_file_adds_and_replaces_parts(tmp_path: Path) -> None:
         ("[resistors.x]\nohm=3", ["resistors", "transistors, diodes"]),
         ("diodes=3", ["diodes", "3"]),
         ("[diodes.x]\nn=1.7", ["diodes.x.is_a", "diodes.x.series_ohm", "missing"]),
-        ("[diodes.x]\nlike='1N4148'\nn='4k7ohm'", ["diodes.x.n", "4700"]),
+        ("[diodes.x]\nlike='1N4148'\nn='4k7ohm'", ["diodes.x.n", "'4k7ohm'", "5 or less"]),
         ("[diodes.x]\nlike='1N4148'\nseries_ohm='3V'", ["diodes.x.series_ohm", "in V", "ohm"]),
         (
             "[opamps.x]\nlike='TL072'\nswing_2k_positive_v=14",

@@ -7,6 +7,7 @@ meant at 25 °C; transistor laws have the signs of an NPN.
 """
 
 import difflib
+import itertools
 import math
 import tomllib
 from collections.abc import Callable, Iterable, Mapping, Sequence
@@ -31,7 +32,6 @@ from tonesim.units import (
     BOLTZMANN,
     ELEMENTARY_CHARGE,
     T0,
-    format_quantity,
     kelvin,
     parse_quantity,
     thermal_voltage,
@@ -59,9 +59,18 @@ def unit_of(key: str) -> str:
 
 def nearest(name: str, known: Iterable[str], most: int = 3) -> list[str]:
     """Known names most like the one given, best first; capitals do not count."""
+    wanted = name.lower()[:80]
     by_lower = {candidate.lower(): candidate for candidate in known}
-    close = difflib.get_close_matches(name.lower()[:80], by_lower, n=most, cutoff=0.5)
-    return [by_lower[candidate] for candidate in close]
+    close = difflib.get_close_matches(wanted, by_lower, n=20, cutoff=0.5)
+
+    def likeness(candidate: str) -> tuple[float, int]:
+        ratio = difflib.SequenceMatcher(None, candidate, wanted).ratio()
+        same = itertools.takewhile(
+            lambda pair: pair[0] == pair[1], zip(candidate, wanted, strict=False)
+        )
+        return round(ratio, 2), len(list(same))
+
+    return [by_lower[candidate] for candidate in sorted(close, key=likeness, reverse=True)[:most]]
 
 
 def _read_number(value: object, info: ValidationInfo) -> object:
@@ -605,9 +614,13 @@ def _place(model: type[Record], loc: Sequence[int | str], within: str) -> tuple[
         else:
             table = records[0] if records else table
             path = f"{path}.{step}" if path else step
-            known = table.model_fields.get(step)
-            records = _records(known.annotation) if known else []
+            records = _records_of(table, step)
     return path, table
+
+
+def _records_of(table: type[Record], key: str) -> list[type[Record]]:
+    known = table.model_fields.get(key)
+    return _records(known.annotation) if known else []
 
 
 def _kinds(record: type[Record]) -> tuple[Any, ...]:
@@ -636,12 +649,11 @@ def _sentence(fault: Mapping[str, Any], path: str, table: type[Record]) -> list[
         offer = "nearest known: " if close else "known: "
         return [f"{path} is no known key, {offer}{', '.join(stem + n for n in close or known)}"]
     if kind == "union_tag_not_found":
-        return [f"{path}.kind is missing, expected {context.get('expected_tags', 'a kind')}"]
-    found = _shown(value, unit_of(key))
-    expected = _expectation(kind, context, fault["msg"])
+        choices = [tag for record in _records_of(table, key) for tag in _kinds(record)]
+        return [f"{path}.kind is missing, expected {', '.join(map(repr, choices))}"]
     if kind == "union_tag_invalid":
         return [f"{path}.kind is {_shown(context.get('tag'))}, expected {context['expected_tags']}"]
-    return [f"{path} is {found}, expected {expected}"]
+    return [f"{path} is {_shown(value)}, expected {_expectation(kind, context, fault['msg'])}"]
 
 
 def _expectation(kind: str, context: Mapping[str, Any], fallback: str) -> str:
@@ -667,9 +679,7 @@ def _expectation(kind: str, context: Mapping[str, Any], fallback: str) -> str:
     return fallback[0].lower() + fallback[1:]
 
 
-def _shown(value: object, unit: str = "") -> str:
-    """Short form of a value found, for a sentence."""
-    if isinstance(value, float) and unit:
-        return format_quantity(value, unit, 6)
+def _shown(value: object) -> str:
+    """Short form of a value found, for a sentence; its unit is in the key."""
     text = f"{value:g}" if isinstance(value, float) else repr(value)
     return text if len(text) <= 60 else text[:57] + "..."

@@ -12,14 +12,14 @@ from typing import NamedTuple
 import numpy as np
 import numpy.typing as npt
 
-from tonesim.catalogue import Diode, Loudspeaker, OpAmp, Transistor
+from tonesim.catalogue import Diode, Loudspeaker, OpAmp, Transistor, saturation_current
 from tonesim.design import BatterySupply, BenchSupply, Design, Multiplier, TransformerSupply
 from tonesim.kernel.devices import BipolarParams
 from tonesim.kernel.driver import DriverParams
 from tonesim.kernel.half import CHAIN_DROPS, CHAIN_MULTIPLIER, CHAIN_NONE, HalfParams
 from tonesim.kernel.load import LoadParams
 from tonesim.kernel.rails import RECTIFIED, RESISTIVE, STIFF, RailParams
-from tonesim.units import BOLTZMANN, ELEMENTARY_CHARGE, T0, ZERO_CELSIUS, kelvin, thermal_voltage
+from tonesim.units import T0, ZERO_CELSIUS, thermal_voltage
 
 Matrix = npt.NDArray[np.float64]
 
@@ -57,37 +57,6 @@ class Circuit(NamedTuple):
     gain: float  # volts at the op-amp's input per volt at the jack
 
 
-def saturation_current(
-    i_s: float, n: float, eg_ev: float, xti: float, temperature_c: float
-) -> float:
-    """Saturation current at a junction temperature.
-
-    Is(T) = Is(T0) (T/T0)^(X/n) exp((Eg q / (n k)) (1/T0 - 1/T)), the temperature law of
-    SPICE's diode and transistor models (Vladimirescu, "The SPICE Book", 1994).
-
-    Parameters
-    ----------
-    i_s : float
-        Saturation current at 25 degrees Celsius, in amperes.
-    n, eg_ev, xti : float
-        Emission coefficient, band gap in electronvolts, exponent X.
-    temperature_c : float
-
-    Returns
-    -------
-    float
-        Amperes.
-
-    Examples
-    --------
-    >>> round(saturation_current(1.0, 1.0, 1.12, 3.0, 35.0), 3)
-    4.543
-    """
-    t = kelvin(temperature_c)
-    per_kelvin = eg_ev * ELEMENTARY_CHARGE / (n * BOLTZMANN)
-    return i_s * (t / T0) ** (xti / n) * math.exp(per_kelvin * (1.0 / T0 - 1.0 / t))
-
-
 def _bipolar(
     part: Transistor, i_s: float, hfe: float, knee: tuple[float, float], temperature_c: float
 ) -> BipolarParams:
@@ -107,14 +76,20 @@ def _bipolar(
 def _devices(
     part: Transistor, temperature_c: float, hfe_factor: float, vbe_shift_v: float
 ) -> tuple[BipolarParams, BipolarParams]:
-    """The device that carries the load current, and the one that drives it."""
+    """The device that carries the load current, and the one that drives it.
+
+    A factor on a Darlington's gain is shared evenly between its two devices.
+    """
+    if part.kind == "darlington":
+        hfe_factor = math.sqrt(hfe_factor)
     i_s = part.is_a * math.exp(-vbe_shift_v / thermal_voltage(REFERENCE_C))
     knee = (part.knee_a, part.knee_exponent)
     device = _bipolar(part, i_s, part.hfe * hfe_factor, knee, temperature_c)
     if part.kind != "darlington":
         return device, device
-    assert part.first_is_a is not None and part.first_hfe is not None  # noqa: S101
-    assert part.first_knee_a is not None  # noqa: S101
+    assert part.first_is_a is not None
+    assert part.first_hfe is not None
+    assert part.first_knee_a is not None
     first_knee = (part.first_knee_a, part.first_knee_exponent)
     first = _bipolar(part, part.first_is_a, part.first_hfe * hfe_factor, first_knee, temperature_c)
     return device, first
@@ -271,7 +246,7 @@ def lower_rails(design: Design) -> tuple[RailParams, RailParams, float]:
     if isinstance(supply, BatterySupply):
         r, limit = supply.internal_ohm, None
     else:
-        assert isinstance(supply, BenchSupply)  # noqa: S101
+        assert isinstance(supply, BenchSupply)
         r, limit = supply.source_ohm, supply.current_limit_a
 
     def source(v: float) -> RailParams:
@@ -312,7 +287,7 @@ def lower_load(design: Design) -> Load:
     if load.part is not None:
         net = _loudspeaker(load.part)
     else:
-        assert load.ohm is not None  # noqa: S101
+        assert load.ohm is not None
         net = Load(np.zeros((0, 0)), np.zeros(0), np.zeros(0), 1.0 / load.ohm)
     d = net.d + 1.0 / (design.driver.feedback_ohm + design.driver.ground_leg_ohm)
     return net._replace(d=d, zobel_ohm=load.zobel_ohm or 0.0, zobel_f=load.zobel_f or 0.0)

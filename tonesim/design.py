@@ -470,14 +470,14 @@ class Design(Record):
         """Say what can be built but deserves doubt, one sentence each; estimates, not results."""
         return [caution for look in _CAUTIONS for caution in look(self)]
 
-    def replace(self, *, catalogue: Catalogue | None = None, **changes: object) -> "Design":
+    def replace(self, *, catalogue: Catalogue | None = None, **changes: Any) -> "Design":
         """Return a changed copy, checked again like a file.
 
         Parameters
         ----------
         catalogue : Catalogue, optional
             Where names of parts are looked up; the shipped one by default.
-        **changes : object
+        **changes
             Sections as mappings, ``bias={"feed_ohm": "4k7"}``, or dotted keys,
             ``**{"bias.feed_ohm": 4700}``. Only what is named changes.
 
@@ -766,10 +766,10 @@ def estimate_idle(design: Design) -> IdleEstimate:
     """
     if not any(design.bias.drops_for(side) or design.bias.multiplier_for(side) for side in SIDES):
         return IdleEstimate(0.0, 0.0, 0.0)
-    low, high = 1e-9, 100.0
+    low, high = 1e-18, 100.0
     held = (0.0, 0.0)
     current = 0.0
-    for _ in range(36):
+    for _ in range(56):
         middle = math.sqrt(low * high)
         needed = 0.0
         bases = []
@@ -975,32 +975,46 @@ def _doubt_driver(design: Design) -> list[str]:
 
 
 def _doubt_base_current(design: Design) -> list[str]:
-    """Where the base current runs out: op-amp without a chain, feed resistor with one."""
+    """Where current runs out at 60 % of the rail: the feed resistor's, or the op-amp's.
+
+    With a chain the feed resistor alone brings the base current; the op-amp carries what the
+    other half's feed pulls through its chain. Without one the op-amp brings the base current.
+    """
     doubts = []
     factors = (design.output.upper_hfe_factor, design.output.lower_hfe_factor)
     limits = (design.driver.part.source_limit_a, design.driver.part.sink_limit_a)
-    for side, factor, limit in zip(SIDES, factors, limits, strict=True):
-        part, rail, load = design.part_for(side), design.rail_for(side), design.load.bench_ohm
-        feed = design.bias.feed_for(side)
-        chained = design.bias.drops_for(side) or design.bias.multiplier_for(side)
-        wanted = 0.6 * rail
-        current = wanted / load
+    for side, other, factor, limit in zip(SIDES, SIDES[::-1], factors, limits, strict=True):
+        part, wanted = design.part_for(side), 0.6 * design.rail_for(side)
+        current = wanted / design.load.bench_ohm
         base = current / (factor * _current_gain(part, current, 25.0))
-        vbe = 0.7 if part.kind == "single" else 1.4
-        if not chained and base > limit:
+        brought = _brought(design, side, wanted)
+        from_driver = base
+        if brought is not None:
+            from_driver = -max(brought - base, 0.0)
+            if base > brought:
+                doubts.append(
+                    f"bias: the {side} half starves below {wanted:.1f} V across the load, "
+                    f"{part.name} wants {format_quantity(base, 'A')} there and its feed resistor "
+                    f"brings {format_quantity(brought, 'A')}"
+                )
+        from_driver += _brought(design, other, -wanted) or 0.0
+        if from_driver > limit:
             doubts.append(
-                f"driver: {part.name} wants {format_quantity(base, 'A')} of base current at "
-                f"{wanted:.1f} V across the load, {design.driver.part.name} gives "
-                f"{format_quantity(limit, 'A')}"
-            )
-        if chained and feed is not None and base > (rail - wanted - vbe) / feed:
-            doubts.append(
-                f"bias: the {side} half starves below {wanted:.1f} V across the load, "
-                f"{part.name} wants {format_quantity(base, 'A')} there and "
-                f"{format_quantity(feed, 'ohm')} brings "
-                f"{format_quantity(max((rail - wanted - vbe) / feed, 0.0), 'A')}"
+                f"driver: at {wanted:.1f} V across the load the {side} half wants "
+                f"{format_quantity(from_driver, 'A')} from the op-amp, "
+                f"{design.driver.part.name} gives {format_quantity(limit, 'A')}"
             )
     return doubts
+
+
+def _brought(design: Design, side: Side, output_v: float) -> float | None:
+    """Return the current a half's feed resistor brings at an output voltage towards its rail."""
+    feed = design.bias.feed_for(side)
+    chained = design.bias.drops_for(side) or design.bias.multiplier_for(side)
+    if feed is None or not chained:
+        return None
+    vbe = 0.7 if design.part_for(side).kind == "single" else 1.4
+    return max((design.rail_for(side) - output_v - vbe) / feed, 0.0)
 
 
 def _doubt_peak_current(design: Design) -> list[str]:

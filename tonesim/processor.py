@@ -21,7 +21,7 @@ from tonesim.signals import Signal
 
 TOLERANCE_V = 1e-3  # a Newton step below this is the last: what is left is its square
 _WARM_UP_S = 0.1  # silence run in `prepare`, so that the stage starts at rest
-_PREPARE_FIRST = "call prepare(sample_rate, block_size) before process"
+_PREPARE_FIRST = "process, reset, latency or evidence before prepare(sample_rate, block_size)"
 
 
 @dataclass(frozen=True)
@@ -117,6 +117,7 @@ class Amplifier:
         self._evidence = np.zeros(loop.EVIDENCE_SIZE)
         self._warm_up(dt)
         self._rest = self._state.copy()
+        self._rest_v = float(self._rest[loop.O1])
         self.reset()
 
     def _at_rest(self, idle: OperatingPoint) -> Signal:
@@ -138,10 +139,8 @@ class Amplifier:
 
     def _warm_up(self, dt: float) -> None:
         """Run silence: the last difference between static and moving solution dies here."""
-        n = self._fast_in.size
-        self._fast_in[:] = 0.0
-        for _ in range(max(1, math.ceil(_WARM_UP_S / (n * dt)))):
-            advance(self._fast_in, self._fast_out, self._state, self._evidence, self._params)
+        silence = np.zeros(round(_WARM_UP_S / dt))
+        advance(silence, np.empty_like(silence), self._state, self._evidence, self._params)
 
     def process(self, block: Signal) -> Signal:
         """Volts at the jack to volts across the load.
@@ -173,7 +172,10 @@ class Amplifier:
                 self._evidence,
                 self._params,
             )
+            # The filters begin at zero volts: they see the distance from rest.
+            self._fast_out[:n] -= self._rest_v
             self._oversampler.down(self._fast_out[:n], out[start : start + self._block])
+        out += self._rest_v
         return out
 
     def reset(self) -> None:

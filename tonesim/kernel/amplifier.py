@@ -38,8 +38,10 @@ ENERGY_RAILS, ENERGY_LOAD, CHARGE_P, CHARGE_N = 9, 10, 11, 12
 EVIDENCE_SIZE = 13
 
 _NEWTON_STEPS = 40
-_PATIENCE = 8
-_BOUND = 0.5  # largest Newton step [V]
+_PATIENCE = 16
+_OUTSIDE = 1.0  # catch diodes hold the output about here beyond the rails [V]
+_BOUND = 0.5  # largest Newton step of a half's drive [V]
+_TOGETHER = 1 / 32  # share of a common step that counts against this bound
 _IMBALANCE = 1e-6  # current left at a node that counts as unsettled [A]
 
 
@@ -175,8 +177,8 @@ def advance(x, y, state, evidence, p):
         top, bottom = swing_limits(v_p, v_n, q)
         i_l = load_history(load_state, o1, p.load, history)
         i_l -= p.load.zobel_g * (zobel_v + p.load.zobel_k * zobel_i)
-        v_o = 3.0 * (o1 - o2) + o3
-        v_d = 3.0 * (d1 - d2) + d3
+        v_o = min(max(3.0 * (o1 - o2) + o3, -v_n - _OUTSIDE), v_p + _OUTSIDE)
+        v_d = min(max(3.0 * (d1 - d2) + d3, -v_n), v_p)
         v_x = min(max(3.0 * (x1 - x2) + x3, bottom), top)
         base = x1 + hd * f0
         settled = False
@@ -219,8 +221,10 @@ def advance(x, y, state, evidence, p):
             move = max(abs(dvo), abs(dvd))
             if not move < 1e6:
                 break
-            if move > bound:
-                k = bound / move
+            # Only the drive of a half meets an exponential; both nodes may travel together.
+            strain = max(abs(dvd - dvo), _TOGETHER * move)
+            if strain > bound:
+                k = bound / strain
                 dvo *= k
                 dvd *= k
                 dvx *= k

@@ -1,5 +1,4 @@
-"""Op-amp as a driver: gain-bandwidth integrator with slew limit, output resistance with
-smooth current limit.
+"""Op-amp as a driver: integrator with slew limit, output resistance with current limit.
 
     dv_x/dt = SR s(2 pi GBW (v_in - beta v_o - v_x / A0) / SR),   s(y) = y / sqrt(1 + y^2)
     i_amp   = I s(e / (R I)) + e g,   e = v_x - v_d,  I the source or the sink limit

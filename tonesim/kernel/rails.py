@@ -76,8 +76,8 @@ def rail_cycles(v_c, i_load, hertz, dt, cycles, p, trace):
     float
         Capacitor voltage at the end.
     """
-    n = int(round(1.0 / (hertz * dt)))
-    for cycle in range(cycles):
+    n = round(1.0 / (hertz * dt))
+    for _ in range(cycles):
         total = 0.0
         low = 1e300
         high = -1e300
