@@ -255,6 +255,9 @@ def advance(x, y, state, evidence, p):
         f0, slope = rate(v_in, v_o, v_x, q)
         if (v_x >= top and f0 > 0.0) or (v_x <= bottom and f0 < 0.0):
             f0 = 0.0
+        if not abs(f0) <= q.slew:
+            unsettled += 1  # the input was no number: forget it, so that the stage recovers
+            f0 = 0.0
         i_load = g_l * v_o + i_l
         for k in range(n_load):
             load_state[k] = history[k] + p.load.q[k] * v_o

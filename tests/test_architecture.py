@@ -1,0 +1,132 @@
+"""The order of modules, and one door for each library."""
+
+import ast
+import subprocess
+import sys
+from pathlib import Path
+
+import pytest
+
+PACKAGE = Path(__file__).parent.parent / "tonesim"
+
+# A module may import only from a lower rank.
+RANKS: dict[str, int] = {
+    "errors": 0,
+    "units": 0,
+    "kernel.jit": 1,
+    "kernel.devices": 2,
+    "kernel.driver": 2,
+    "kernel.fir": 2,
+    "kernel.load": 2,
+    "kernel.rails": 2,
+    "kernel.half": 3,
+    "kernel.surface": 3,
+    "kernel.amplifier": 4,
+    "kernel.static": 4,
+    "signals": 1,
+    "catalogue": 5,
+    "design": 6,
+    "circuit": 7,
+    "curve": 8,
+    "oversample": 8,
+    "processor": 9,
+    "wav": 10,
+    "level": 10,
+    "cabinet": 10,
+    "render": 11,
+    "show": 12,
+    "cli": 13,
+    "__main__": 14,
+}
+# Which modules may import a library; "kernel" stands for everything in that folder.
+DOORS: dict[str, set[str]] = {
+    "numba": {"kernel"},
+    "pydantic": {"catalogue", "design"},
+    "tomllib": {"catalogue", "design"},
+    "soundfile": {"wav"},
+    "sounddevice": {"live"},
+    "pyloudnorm": {"level"},
+    "matplotlib": {"plot"},
+    "rich": {"show"},
+    "click": {"cli", "__main__"},
+    "scipy": {"curve", "oversample", "level", "cabinet", "bench", "masking"},
+}
+BANNED_NAMES = {"util", "utils", "helpers", "common", "misc", "base"}
+
+
+def modules() -> dict[str, Path]:
+    found = {}
+    for path in sorted(PACKAGE.rglob("*.py")):
+        name = ".".join(path.relative_to(PACKAGE).with_suffix("").parts)
+        if path.name != "__init__.py":
+            found[name] = path
+    return found
+
+
+def imports(path: Path) -> list[str]:
+    """Every module a file imports, anywhere in it."""
+    names = []
+    for node in ast.walk(ast.parse(path.read_text())):
+        if isinstance(node, ast.Import):
+            names += [alias.name for alias in node.names]
+        elif isinstance(node, ast.ImportFrom):
+            assert node.level == 0, f"{path.name}: relative import"
+            module = node.module or ""
+            if module in ("tonesim", "tonesim.kernel"):
+                names += [f"{module}.{alias.name}" for alias in node.names]
+            else:
+                names.append(module)
+    return names
+
+
+def test_every_module_has_a_rank():
+    assert set(modules()) == set(RANKS)
+
+
+@pytest.mark.parametrize("name", sorted(RANKS))
+def test_a_module_imports_only_from_lower_ranks(name):
+    for target in imports(modules()[name]):
+        if not target.startswith("tonesim.") or target == "tonesim.__version__":
+            continue
+        other = target.removeprefix("tonesim.")
+        assert RANKS[other] < RANKS[name], f"{name} imports {other}"
+
+
+@pytest.mark.parametrize("name", sorted(RANKS))
+def test_a_library_is_imported_only_through_its_door(name):
+    owner = name.split(".")[0]
+    for target in imports(modules()[name]):
+        library = target.split(".")[0]
+        assert owner in DOORS.get(library, {owner}), f"{name} imports {library}"
+
+
+def test_the_kernel_imports_nothing_of_ours_and_raises_nothing():
+    for name, path in modules().items():
+        if not name.startswith("kernel."):
+            continue
+        for target in imports(path):
+            assert not target.startswith("tonesim.") or target.startswith("tonesim.kernel")
+        assert not any(isinstance(n, ast.Raise) for n in ast.walk(ast.parse(path.read_text())))
+
+
+def test_no_module_is_a_junk_drawer():
+    assert not {n.split(".")[-1] for n in modules()} & BANNED_NAMES
+
+
+def test_heavy_libraries_wait_until_they_are_needed():
+    code = (
+        "import sys, tonesim.cli; "
+        "print(*sorted({'numpy', 'numba', 'scipy', 'pydantic', 'soundfile', 'rich'}"
+        " & set(sys.modules)))"
+    )
+    done = subprocess.run([sys.executable, "-c", code], capture_output=True, text=True, check=True)
+    assert done.stdout.split() == []
+
+
+@pytest.mark.parametrize("name", sorted(set(RANKS) - {"__main__"}))
+def test_a_module_imports_alone(name):
+    code = f"import tonesim.{name}"
+    done = subprocess.run(
+        [sys.executable, "-W", "error", "-c", code], capture_output=True, text=True, check=False
+    )
+    assert done.returncode == 0, done.stderr
