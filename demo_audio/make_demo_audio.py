@@ -51,12 +51,12 @@ class String:
 
 # A 0.010 to 0.046 inch set at 648 mm, by string number.
 STRINGS = {
-    6: String(40, 78.0, 0.43e-3, 1.25, 1.1e-2, 1.00),
-    5: String(45, 87.0, 0.39e-3, 1.35, 1.0e-2, 1.00),
-    4: String(50, 82.0, 0.33e-3, 1.5, 8.0e-3, 0.95),
-    3: String(55, 74.0, 0.43e-3, 1.6, 2.5e-3, 1.10),
-    2: String(59, 68.5, 0.33e-3, 1.9, 2.0e-3, 0.90),
-    1: String(64, 72.0, 0.254e-3, 2.3, 1.5e-3, 0.85),
+    6: String(40, 78.0, 0.43e-3, 1.25, 1.1e-2, 1.80),
+    5: String(45, 87.0, 0.39e-3, 1.35, 1.0e-2, 1.50),
+    4: String(50, 82.0, 0.33e-3, 1.5, 8.0e-3, 1.20),
+    3: String(55, 74.0, 0.43e-3, 1.6, 2.5e-3, 1.00),
+    2: String(59, 68.5, 0.33e-3, 1.9, 2.0e-3, 0.75),
+    1: String(64, 72.0, 0.254e-3, 2.3, 1.5e-3, 0.65),
 }
 
 
@@ -195,7 +195,7 @@ def pluck(modes: Modes, stroke: Stroke, angle: float) -> Array:
 def slap(modes: Modes, stroke: Stroke, rng: np.random.Generator) -> Complex:
     """What a string adds to its motion when it meets a fret: a short impulse at that fret."""
     fret_m = SCALE_M * 2.0 ** (-rng.uniform(14, 20) / 12)
-    speed = 0.9 * max(stroke.height_m - 1.7e-3, 0.0) * rng.uniform(0.3, 1.0)
+    speed = 0.35 * max(stroke.height_m - 1.7e-3, 0.0) * rng.uniform(0.3, 1.0)
     k, dull = modes.wavenumber, np.exp(-0.5 * (modes.omega * 2.5e-5) ** 2)
     kick = speed * np.sin(k * fret_m) * np.exp(-0.5 * (k * 2e-3) ** 2) * dull * modes.cosine
     return np.asarray(-1j * kick / modes.omega * modes.omega[0], dtype=np.complex128)
@@ -298,7 +298,7 @@ def hands(voice: Voice, modes: Modes, origin: float, frames: int) -> tuple[Array
         As `ring` takes them; the kinds are finger, palm, pick.
     """
     k, first = modes.wavenumber, voice.strokes[0]
-    palm = 0.5 * (1 - np.cos(2 * k * PALM_M) * np.exp(-2 * (k * 5e-3) ** 2))
+    palm = 0.015 + 0.5 * (1 - np.cos(2 * k * PALM_M) * np.exp(-2 * (k * 5e-3) ** 2))
     profile = np.stack([np.ones(k.size), palm, np.sin(k * first.pick_m) ** 2])
     rate, pitch = np.zeros((3, frames)), np.zeros(frames)
     for i, s in enumerate(voice.strokes):
@@ -309,7 +309,7 @@ def hands(voice: Voice, modes: Modes, origin: float, frames: int) -> tuple[Array
         if s.choke_per_s:
             _raise(rate[0], s.at - origin - 0.04, later - origin, s.choke_per_s)
         if s.palm:
-            _raise(rate[1], s.at - origin - 0.02, min(later, end + 0.1) - origin, 1500 * s.palm)
+            _raise(rate[1], s.at - origin - 0.02, min(later, end + 0.1) - origin, 270 * s.palm)
         if end < later:
             lift = 130.0 if voice.fret else 90.0
             _raise(rate[0], end - origin, later - origin - 0.01, lift, 0.035)
@@ -402,7 +402,7 @@ def pick_noise(strokes: Iterable[Stroke], frames: int, rng: np.random.Generator)
         noise = signal.sosfilt(scrape, rng.standard_normal(n + 200))[200:] * swell
         at = round(s.at * RATE) - round(contact_s(s) * RATE)
         rough = 1.0 if s.string > 3 else 0.4
-        out[at : at + n] += rough * noise * (6.0 * s.height_m + 2e-3)
+        out[at : at + n] += rough * noise * (14.0 * s.height_m + 8e-3)
     return out
 
 
@@ -457,7 +457,7 @@ def floor_volts(pickup: Pickup, frames: int, rng: np.random.Generator) -> Array:
     out = np.zeros(frames)
     mains = 50.0 + 0.01 * np.sin(2 * np.pi * 0.05 * t)
     turn = 2 * np.pi * np.cumsum(mains) / RATE
-    for harmonic, below in zip(range(1, 25), _hum_shape(), strict=True):
+    for harmonic, below in zip(range(1, 41), _hum_shape(), strict=True):
         level = 10 ** ((pickup.hum_db - below) / 20) * FULL_SCALE_V
         out += level * np.sin(harmonic * turn + rng.uniform(0, 2 * np.pi))
     hz = np.fft.rfftfreq(frames, 1 / RATE)
@@ -471,8 +471,8 @@ def floor_volts(pickup: Pickup, frames: int, rng: np.random.Generator) -> Array:
 
 def _hum_shape() -> Array:
     """Decibels of each harmonic below the first: odd ones stronger, falling with frequency."""
-    h = np.arange(1, 25)
-    return np.asarray(16 * np.log10(h) + np.where(h % 2, 0.0, 7.0), dtype=np.float64)
+    h = np.arange(1, 41)
+    return np.asarray(14 * np.log10(h) + 0.5 * h + np.where(h % 2, 0.0, 7.0), dtype=np.float64)
 
 
 def perform(
@@ -590,8 +590,8 @@ def strum(shape: str, kind: str, at: float, until: float, rng: np.random.Generat
         numbers = numbers[::-1][: int(rng.integers(3, 5))]
     elif kind == "d":
         numbers = numbers[: int(rng.integers(4, 6))]
-    force = {"D": 1.5, "U": 1.05, "d": 1.0, "u": 0.7, "p": 1.5, "x": 1.0}[kind]
-    gap = {"D": 0.009, "d": 0.011, "p": 0.005, "x": 0.006}.get(kind, 0.007)
+    force = {"D": 1.0, "U": 0.8, "d": 0.75, "u": 0.55, "p": 1.25, "x": 0.9}[kind]
+    gap = {"D": 0.011, "d": 0.013, "p": 0.006, "x": 0.007}.get(kind, 0.007)
     pick_m, moment, strokes = 0.12 + 0.01 * rng.standard_normal(), at, []
     for number in numbers:
         strokes.append(
@@ -603,7 +603,7 @@ def strum(shape: str, kind: str, at: float, until: float, rng: np.random.Generat
                 height_m=1e-3 * force * float(np.exp(0.16 * rng.standard_normal())),
                 pick_m=pick_m + 0.002 * rng.standard_normal(),
                 palm=0.6 * (kind == "p"),
-                choke_per_s=110.0 * (kind == "x"),
+                choke_per_s=55.0 * (kind == "x"),
                 up=kind in "Uu",
             )
         )
@@ -641,7 +641,7 @@ def riff_strokes(token: str, at: float, until: float, rng: np.random.Generator) 
             string=string,
             fret=number,
             until=until,
-            height_m=(3.0 if muted else 2.4) * 1e-3 * float(np.exp(0.1 * rng.standard_normal())),
+            height_m=(3.2 if muted else 2.1) * 1e-3 * float(np.exp(0.1 * rng.standard_normal())),
             pick_m=0.075 + 0.005 * rng.standard_normal(),
             palm=float(np.clip(0.9 + 0.1 * rng.standard_normal(), 0.6, 1.1)) * muted,
             up=muted and bool(rng.random() < 0.25),

@@ -14,6 +14,7 @@ RANKS: dict[str, int] = {
     "errors": 0,
     "units": 0,
     "kernel.jit": 1,
+    "kernel.bracket": 2,
     "kernel.devices": 2,
     "kernel.driver": 2,
     "kernel.fir": 2,

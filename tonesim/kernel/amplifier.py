@@ -7,8 +7,8 @@ Unknowns of a step are v_o, v_d and v_x; the implicit trapezoidal rule gives
     v_x = clip(v_x0 + hd (f(v_o, v_x) + f0))        f = dv_x/dt; clip at the swing limits
 
 Newton runs from a quadratic extrapolation of the last three steps. A step that does not
-settle is solved again by nested bisection, which cannot fail to find the sign change: every
-element is passive, so the output node's current falls as v_o rises. What even that leaves
+settle is solved again by nested brackets, which cannot lose the sign change: every element is
+passive, so the output node's current falls as v_o rises. What even that leaves
 unbalanced is counted as unsettled.
 """
 
@@ -16,6 +16,7 @@ from typing import NamedTuple
 
 import numpy as np
 
+from tonesim.kernel.bracket import MOST_CUTS, narrow, next_share
 from tonesim.kernel.driver import DriverParams, output_current, rate
 from tonesim.kernel.jit import kernel
 from tonesim.kernel.load import LoadParams, load_history, zobel_step
@@ -42,6 +43,7 @@ _PATIENCE = 16
 _OUTSIDE = 1.0  # catch diodes hold the output about here beyond the rails [V]
 _BOUND = 0.5  # largest Newton step of a half's drive [V]
 _TOGETHER = 1 / 32  # share of a common step that counts against this bound
+_REACH = 10.0  # how far beyond the rails a node is looked for [V]
 _IMBALANCE = 1e-6  # current left at a node that counts as unsettled [A]
 
 
@@ -71,74 +73,85 @@ def swing_limits(v_p, v_n, q):
 
 @kernel
 def driver_voltage(v_o, v_in, v_x0, f0, hd, top, bottom, q):
-    """v_x for a given v_o by bisection; the step equation rises in v_x everywhere."""
-    lo = min(bottom, v_x0)
-    hi = max(top, v_x0)
-    for _ in range(200):
-        mid = 0.5 * (lo + hi)
-        if mid <= lo or mid >= hi:
+    """v_x for a given v_o; the step equation rises in v_x everywhere."""
+    x1, x2 = min(bottom, v_x0), max(top, v_x0)
+    f1 = x1 - v_x0 - hd * (rate(v_in, v_o, x1, q)[0] + f0)
+    f2 = x2 - v_x0 - hd * (rate(v_in, v_o, x2, q)[0] + f0)
+    if f1 >= 0.0:
+        return bottom
+    if f2 <= 0.0:
+        return top
+    x3, f3, t = x2, f2, 0.5
+    for _ in range(MOST_CUTS):
+        v_x = x1 + t * (x2 - x1)
+        f = v_x - v_x0 - hd * (rate(v_in, v_o, v_x, q)[0] + f0)
+        x1, x2, x3, f1, f2, f3 = narrow(v_x, f, x1, x2, f1, f2)
+        t, tight = next_share(x1, x2, x3, f1, f2, f3)
+        if tight:
             break
-        f, _s = rate(v_in, v_o, mid, q)
-        if mid - v_x0 - hd * (f + f0) > 0.0:
-            hi = mid
-        else:
-            lo = mid
-    return min(max(0.5 * (lo + hi), bottom), top)
+    return min(max(x1 if abs(f1) < abs(f2) else x2, bottom), top)
+
+
+@kernel
+def drive_imbalance(v_d, v_o, v_x, v_p, v_n, p):
+    """Current into the drive node; it falls as v_d rises."""
+    i, _g = output_current(v_x - v_d, p.driver)
+    _a, _au, _ah, b, _bu, _bh = look_up(p.upper, p.grid, v_d - v_o, v_p - v_o)
+    _c, _cu, _ch, d, _du, _dh = look_up(p.lower, p.grid, v_o - v_d, v_o + v_n)
+    return i + b - d
 
 
 @kernel
 def drive_node(v_o, v_x, v_p, v_n, p):
-    """v_d for given v_o and v_x by bisection: its node current falls as v_d rises."""
-    lo = -v_n - 10.0
-    hi = v_p + 10.0
-    for _ in range(200):
-        mid = 0.5 * (lo + hi)
-        if mid <= lo or mid >= hi:
+    """v_d at which the drive node is balanced, for given v_o and v_x."""
+    x1, x2 = -v_n - _REACH, v_p + _REACH
+    f1 = drive_imbalance(x1, v_o, v_x, v_p, v_n, p)
+    f2 = drive_imbalance(x2, v_o, v_x, v_p, v_n, p)
+    x3, f3, t = x2, f2, 0.5
+    for _ in range(MOST_CUTS):
+        v_d = x1 + t * (x2 - x1)
+        f = drive_imbalance(v_d, v_o, v_x, v_p, v_n, p)
+        x1, x2, x3, f1, f2, f3 = narrow(v_d, f, x1, x2, f1, f2)
+        t, tight = next_share(x1, x2, x3, f1, f2, f3)
+        if tight:
             break
-        i, _g = output_current(v_x - mid, p.driver)
-        _a, _au, _ah, b, _bu, _bh = look_up(p.upper, p.grid, mid - v_o, v_p - v_o)
-        _c, _cu, _ch, d, _du, _dh = look_up(p.lower, p.grid, v_o - mid, v_o + v_n)
-        if i + b - d > 0.0:
-            lo = mid
-        else:
-            hi = mid
-    return 0.5 * (lo + hi)
+    return x1 if abs(f1) < abs(f2) else x2
+
+
+@kernel
+def output_imbalance(v_o, v_in, i_l, v_x0, f0, hd, v_p, v_n, p):
+    """Current into the output node, the rest settled; it falls as v_o rises. Also v_d, v_x."""
+    top, bottom = swing_limits(v_p, v_n, p.driver)
+    v_x = driver_voltage(v_o, v_in, v_x0, f0, hd, top, bottom, p.driver)
+    v_d = drive_node(v_o, v_x, v_p, v_n, p)
+    a, _au, _ah, _b, _bu, _bh = look_up(p.upper, p.grid, v_d - v_o, v_p - v_o)
+    c, _cu, _ch, _d, _du, _dh = look_up(p.lower, p.grid, v_o - v_d, v_o + v_n)
+    return a - c - p.load.g * v_o - i_l, v_d, v_x
 
 
 @kernel
 def solve_step(v_in, i_l, v_x0, f0, hd, v_p, v_n, p):
-    """The step equations by nested bisection: slow, and sure of a sign change.
+    """The step equations by nested brackets: slow, and sure of the sign change.
 
     Returns
     -------
     v_o, v_d, v_x, imbalance : float
         The imbalance is the larger of the two node currents left over, in amperes.
     """
-    q = p.driver
-    top, bottom = swing_limits(v_p, v_n, q)
-    lo = -v_n - 10.0
-    hi = v_p + 10.0
-    v_o = 0.0
-    v_x = 0.0
-    v_d = 0.0
-    for _ in range(200):
-        v_o = 0.5 * (lo + hi)
-        v_x = driver_voltage(v_o, v_in, v_x0, f0, hd, top, bottom, q)
-        v_d = drive_node(v_o, v_x, v_p, v_n, p)
-        a, _au, _ah, _b, _bu, _bh = look_up(p.upper, p.grid, v_d - v_o, v_p - v_o)
-        c, _cu, _ch, _d, _du, _dh = look_up(p.lower, p.grid, v_o - v_d, v_o + v_n)
-        if a - c - p.load.g * v_o - i_l > 0.0:
-            if v_o <= lo:
-                break
-            lo = v_o
-        else:
-            if v_o >= hi:
-                break
-            hi = v_o
-    a, _au, _ah, b, _bu, _bh = look_up(p.upper, p.grid, v_d - v_o, v_p - v_o)
-    c, _cu, _ch, d, _du, _dh = look_up(p.lower, p.grid, v_o - v_d, v_o + v_n)
-    i, _g = output_current(v_x - v_d, q)
-    return v_o, v_d, v_x, max(abs(a - c - p.load.g * v_o - i_l), abs(i + b - d))
+    x1, x2 = -v_n - _REACH, v_p + _REACH
+    f1, _d1, _x1 = output_imbalance(x1, v_in, i_l, v_x0, f0, hd, v_p, v_n, p)
+    f2, _d2, _x2 = output_imbalance(x2, v_in, i_l, v_x0, f0, hd, v_p, v_n, p)
+    x3, f3, t = x2, f2, 0.5
+    for _ in range(MOST_CUTS):
+        v_o = x1 + t * (x2 - x1)
+        f, _d, _x = output_imbalance(v_o, v_in, i_l, v_x0, f0, hd, v_p, v_n, p)
+        x1, x2, x3, f1, f2, f3 = narrow(v_o, f, x1, x2, f1, f2)
+        t, tight = next_share(x1, x2, x3, f1, f2, f3)
+        if tight:
+            break
+    v_o = x1 if abs(f1) < abs(f2) else x2
+    left, v_d, v_x = output_imbalance(v_o, v_in, i_l, v_x0, f0, hd, v_p, v_n, p)
+    return v_o, v_d, v_x, max(abs(left), abs(drive_imbalance(v_d, v_o, v_x, v_p, v_n, p)))
 
 
 @kernel

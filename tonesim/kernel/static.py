@@ -8,11 +8,12 @@ from typing import NamedTuple
 
 import numpy as np
 
+from tonesim.kernel.bracket import MOST_CUTS, narrow, next_share
 from tonesim.kernel.driver import output_current
 from tonesim.kernel.half import catch_current, first_guess, solve_half
 from tonesim.kernel.jit import kernel
 
-_CUTS = 100
+_REACH = 10.0  # how far beyond the rails a node is looked for [V]
 
 
 class StaticPoint(NamedTuple):
@@ -39,22 +40,29 @@ def half_at_rest(u, h, collector_extra, p, x):
 
 
 @kernel
+def drive_imbalance(v_d, v_o, v_x, v_p, v_n, extra, upper, lower, q, x):
+    """Current into the drive node; it falls as v_d rises."""
+    i, _g = output_current(v_x - v_d, q)
+    _a, b, _r = half_at_rest(v_d - v_o, v_p - v_o, extra, upper, x)
+    _c, d, _r2 = half_at_rest(v_o - v_d, v_o + v_n, extra, lower, x)
+    return i + b - d
+
+
+@kernel
 def drive_at_rest(v_o, v_x, v_p, v_n, extra, upper, lower, q, x):
-    """v_d by bisection: the drive node's current falls as v_d rises."""
-    lo = -v_n - 10.0
-    hi = v_p + 10.0
-    for _ in range(_CUTS):
-        v_d = 0.5 * (lo + hi)
-        if v_d <= lo or v_d >= hi:
+    """v_d at which the drive node is balanced."""
+    x1, x2 = -v_n - _REACH, v_p + _REACH
+    f1 = drive_imbalance(x1, v_o, v_x, v_p, v_n, extra, upper, lower, q, x)
+    f2 = drive_imbalance(x2, v_o, v_x, v_p, v_n, extra, upper, lower, q, x)
+    x3, f3, t = x2, f2, 0.5
+    for _ in range(MOST_CUTS):
+        v_d = x1 + t * (x2 - x1)
+        f = drive_imbalance(v_d, v_o, v_x, v_p, v_n, extra, upper, lower, q, x)
+        x1, x2, x3, f1, f2, f3 = narrow(v_d, f, x1, x2, f1, f2)
+        t, tight = next_share(x1, x2, x3, f1, f2, f3)
+        if tight:
             break
-        i, _g = output_current(v_x - v_d, q)
-        _a, b, _r = half_at_rest(v_d - v_o, v_p - v_o, extra, upper, x)
-        _c, d, _r2 = half_at_rest(v_o - v_d, v_o + v_n, extra, lower, x)
-        if i + b - d > 0.0:
-            lo = v_d
-        else:
-            hi = v_d
-    return 0.5 * (lo + hi)
+    return x1 if abs(f1) < abs(f2) else x2
 
 
 @kernel
@@ -65,6 +73,16 @@ def driver_at_rest(v_in, v_o, v_p, v_n, q):
     else:
         top, bottom = v_p - q.drop_positive, -v_n + q.drop_negative
     return min(max((v_in + q.offset - q.beta * v_o) / q.per_a0, bottom), top)
+
+
+@kernel
+def output_imbalance(v_o, v_in, v_p, v_n, g_load, extra, upper, lower, q, x):
+    """Current into the output node, op-amp and drive node settled; it falls as v_o rises."""
+    v_x = driver_at_rest(v_in, v_o, v_p, v_n, q)
+    v_d = drive_at_rest(v_o, v_x, v_p, v_n, extra, upper, lower, q, x)
+    a, _b, _r = half_at_rest(v_d - v_o, v_p - v_o, extra, upper, x)
+    c, _d, _r2 = half_at_rest(v_o - v_d, v_o + v_n, extra, lower, x)
+    return a - c - g_load * v_o
 
 
 @kernel
@@ -89,21 +107,18 @@ def solve_static(v_in, v_p, v_n, g_load, extra, upper, lower, q):
     StaticPoint
     """
     x = np.zeros(4)
-    lo = -v_n - 10.0
-    hi = v_p + 10.0
-    for _ in range(_CUTS):
-        v_o = 0.5 * (lo + hi)
-        if v_o <= lo or v_o >= hi:
+    x1, x2 = -v_n - _REACH, v_p + _REACH
+    f1 = output_imbalance(x1, v_in, v_p, v_n, g_load, extra, upper, lower, q, x)
+    f2 = output_imbalance(x2, v_in, v_p, v_n, g_load, extra, upper, lower, q, x)
+    x3, f3, t = x2, f2, 0.5
+    for _ in range(MOST_CUTS):
+        v_o = x1 + t * (x2 - x1)
+        f = output_imbalance(v_o, v_in, v_p, v_n, g_load, extra, upper, lower, q, x)
+        x1, x2, x3, f1, f2, f3 = narrow(v_o, f, x1, x2, f1, f2)
+        t, tight = next_share(x1, x2, x3, f1, f2, f3)
+        if tight:
             break
-        v_x = driver_at_rest(v_in, v_o, v_p, v_n, q)
-        v_d = drive_at_rest(v_o, v_x, v_p, v_n, extra, upper, lower, q, x)
-        a, _b, _r = half_at_rest(v_d - v_o, v_p - v_o, extra, upper, x)
-        c, _d, _r2 = half_at_rest(v_o - v_d, v_o + v_n, extra, lower, x)
-        if a - c - g_load * v_o > 0.0:
-            lo = v_o
-        else:
-            hi = v_o
-    v_o = 0.5 * (lo + hi)
+    v_o = x1 if abs(f1) < abs(f2) else x2
     v_x = driver_at_rest(v_in, v_o, v_p, v_n, q)
     v_d = drive_at_rest(v_o, v_x, v_p, v_n, extra, upper, lower, q, x)
     a, b, r1 = half_at_rest(v_d - v_o, v_p - v_o, extra, upper, x)

@@ -1,0 +1,26 @@
+"""tonesim: hear a small solid-state guitar amplifier's output stage before it is built.
+
+The modules, in the order in which one may import another (never the other way round):
+
+- `tonesim.errors`: what a user can mend, each kind with its exit code
+- `tonesim.units`: quantities as builders write them, decibels, preferred values
+- `tonesim.signals`: what a signal is, and test signals
+- `tonesim.kernel`: the compiled numerical core: devices, halves, driver, rails, load, filters
+- `tonesim.catalogue`: parts, their laws and the part files
+- `tonesim.design`: design files and presets to a checked `Design`
+- `tonesim.circuit`: a design to bare numbers
+- `tonesim.curve`: transfer surfaces, idle point, clip levels
+- `tonesim.oversample`: up to the internal rate and down again
+- `tonesim.processor`: the stage as a processor of blocks, `Amplifier`
+- `tonesim.wav`: recordings in, results out
+- `tonesim.level`: loudness, peak, gain
+- `tonesim.cabinet`: the cabinet as a filter
+- `tonesim.render`: a recording through a design into a file
+- `tonesim.demo`: the shipped recordings through three presets, and what to listen for
+- `tonesim.show`: text on the terminal
+- `tonesim.cli`: the command line
+
+Nothing is imported here, so that the command line answers at once.
+"""
+
+__version__ = "0.1.0"
