@@ -1,12 +1,12 @@
 """Make the three demo recordings: an electric guitar straight into an interface, computed.
 
-Run by hand: ``python demo_audio/make_demo_audio.py [FOLDER]`` (the folder of this script by default).
+Run by hand: ``python demo_audio/make_demo_audio.py [FOLDER]`` (by default the script's folder).
 The music, the player and the guitar are invented. Every run gives the same bytes.
 
 Each string is a set of damped modes in two polarisations (Fletcher and Rossing, "The Physics of
-Musical Instruments", ch. 2 and 9). A note is one modal state that strokes add to and that palm, pick
-and fingers damp; nothing is ever cut off or faded. The pickup reads the displacement, bends it a
-little, differentiates it, and drives its own inductance, the pots and the cable.
+Musical Instruments", ch. 2 and 9). A note is one modal state that strokes add to and that palm,
+pick and fingers damp; nothing is ever cut off or faded. The pickup reads the displacement, bends it
+a little, differentiates it, and drives its own inductance, the pots and the cable.
 All values below are typical ones from memory.
 """
 
@@ -14,7 +14,8 @@ from __future__ import annotations
 
 import sys
 from collections.abc import Iterable, Sequence
-from dataclasses import dataclass, field, replace
+from dataclasses import dataclass, field
+from itertools import pairwise
 from pathlib import Path
 
 import numpy as np
@@ -117,7 +118,19 @@ class Modes:
     cosine: Array  # share of a vertical pluck that this polarisation takes
     sine: Array  # share of a sideways pluck
     reach: Array
-    stretch: float  # relative pitch rise per (m/m)^2 of mean square slope
+    stretch: float  # relative rise of pitch per unit of strain, E A / (2 T)
+
+    def only(self, use: npt.NDArray[np.bool_]) -> Modes:
+        """The chosen modes."""
+        return Modes(
+            self.omega[use],
+            self.sigma[use],
+            self.wavenumber[use],
+            self.cosine[use],
+            self.sine[use],
+            self.reach[use],
+            self.stretch,
+        )
 
 
 def note_hz(string: int, fret: int) -> float:
@@ -126,7 +139,7 @@ def note_hz(string: int, fret: int) -> float:
 
 
 def inharmonicity(string: int, length_m: float) -> float:
-    """B = pi^3 E d^4 / (64 T L^2) in f_n = n f sqrt(1 + B n^2) (Fletcher and Rossing, 2.18)."""
+    """B = pi^3 E d^4 / (64 T L^2) in f_n = n f sqrt(1 + B n^2) (Fletcher and Rossing, ch. 2)."""
     s = STRINGS[string]
     return np.pi**3 * YOUNG_PA * s.core_m**4 / (64.0 * s.tension_n * length_m**2)
 
@@ -162,7 +175,7 @@ def string_modes(string: int, fret: int, pickup: Pickup) -> Modes:
         cosine=np.concatenate([one * np.cos(lean), one * -np.sin(lean)]),
         sine=np.concatenate([one * np.sin(lean), one * np.cos(lean)]),
         reach=np.concatenate([reach * np.cos(lean), reach * -np.sin(lean)]),
-        stretch=YOUNG_PA * np.pi * s.core_m**2 / 4 / (4 * s.tension_n),
+        stretch=YOUNG_PA * np.pi * s.core_m**2 / 4 / (2 * s.tension_n),
     )
 
 
@@ -179,13 +192,13 @@ def pluck(modes: Modes, stroke: Stroke, angle: float) -> Array:
     Returns
     -------
     ndarray, (modes,)
-        2 h sin(k x) / (k^2 x (L - x)), for every polarisation its share, in metres. A soft stroke slides
-        off the rounded pick more slowly, which takes the highest modes.
+        2 h sin(k x) / (k^2 x (L - x)), for every polarisation its share, in metres. A soft stroke
+        slides off the rounded pick more slowly, which takes the highest modes.
     """
     k, length = modes.wavenumber, np.pi / modes.wavenumber[0]
     corner = 2 * stroke.height_m * np.sin(k * stroke.pick_m)
     corner = corner / (k**2 * stroke.pick_m * (length - stroke.pick_m))
-    slip_s = 2.2e-5 + 4.5e-5 * np.exp(-stroke.height_m / 1e-3)
+    slip_s = 2.8e-5 + 4.4e-5 * np.exp(-stroke.height_m / 1e-3)
     width_m = 1.2e-3
     soft = np.exp(-0.5 * (modes.omega * slip_s) ** 2 - 0.5 * (k * width_m) ** 2)
     share = modes.cosine * np.cos(angle) + modes.sine * np.sin(angle)
@@ -195,7 +208,7 @@ def pluck(modes: Modes, stroke: Stroke, angle: float) -> Array:
 def slap(modes: Modes, stroke: Stroke, rng: np.random.Generator) -> Complex:
     """What a string adds to its motion when it meets a fret: a short impulse at that fret."""
     fret_m = SCALE_M * 2.0 ** (-rng.uniform(14, 20) / 12)
-    speed = 0.35 * max(stroke.height_m - 1.7e-3, 0.0) * rng.uniform(0.3, 1.0)
+    speed = 0.3 * max(stroke.height_m - 1.7e-3, 0.0) * rng.uniform(0.3, 1.0)
     k, dull = modes.wavenumber, np.exp(-0.5 * (modes.omega * 2.5e-5) ** 2)
     kick = speed * np.sin(k * fret_m) * np.exp(-0.5 * (k * 2e-3) ** 2) * dull * modes.cosine
     return np.asarray(-1j * kick / modes.omega * modes.omega[0], dtype=np.complex128)
@@ -206,8 +219,8 @@ def ring(
 ) -> tuple[Array, Complex]:
     """Let a string ring on from a state.
 
-    Between two block borders each mode turns and shrinks at a constant complex rate; the part that differs from
-    the mode's own rate (tension, vibrato, damping) enters as a second-order series, so that the
+    Between two block borders a mode turns and shrinks at one complex rate; what differs from the
+    mode's own rate (tension, vibrato, damping) enters as a second-order series, so that the
     whole block is three matrix products.
 
     Parameters
@@ -237,17 +250,10 @@ def ring(
         here = slice(start, stop + 1)
         fast = np.abs(state) * modes.omega * np.abs(modes.reach).max(axis=1)
         use = fast > INAUDIBLE_M_S
-        piece = replace(
-            modes,
-            **{
-                name: getattr(modes, name)[use]
-                for name in ("omega", "sigma", "wavenumber", "cosine", "sine", "reach")
-            },
-        )
         state, lost = np.zeros_like(state), state
         if np.any(use):
             out[start:stop], state[use] = _ring_chunk(
-                piece, lost[use], profile[:, use], damping[:, here], bend[here]
+                modes.only(use), lost[use], profile[:, use], damping[:, here], bend[here]
             )
     return out, state
 
@@ -260,8 +266,9 @@ def _ring_chunk(
     seconds = border / RATE
     shrink = (damping[:, border] - damping[:, :1]).T @ profile
     fade = seconds[:, None] * modes.sigma + shrink
-    energy = np.exp(-2 * fade) @ (modes.wavenumber * np.abs(state)) ** 2 / 8
-    gain = np.diff(seconds) * modes.stretch * energy[:-1]  # mean tension, so pitch, rises with energy
+    # Strain averaged over a period, (1/2L) int y'^2 dx: what a hard attack adds to the tension.
+    strain = np.exp(-2 * fade) @ (modes.wavenumber * np.abs(state)) ** 2 / 8
+    gain = np.diff(seconds) * modes.stretch * strain[:-1]
     extra = np.append(0.0, np.cumsum(gain)) + bend[border] - bend[0]
     path = 1j * modes.omega * (seconds + extra)[:, None] - fade
     at_border = state * np.exp(path)
@@ -309,7 +316,7 @@ def hands(voice: Voice, modes: Modes, origin: float, frames: int) -> tuple[Array
         if s.choke_per_s:
             _raise(rate[0], s.at - origin - 0.04, later - origin, s.choke_per_s)
         if s.palm:
-            _raise(rate[1], s.at - origin - 0.02, min(later, end + 0.1) - origin, 270 * s.palm)
+            _raise(rate[1], s.at - origin - 0.02, min(later, end + 0.1) - origin, 150 * s.palm)
         if end < later:
             lift = 130.0 if voice.fret else 90.0
             _raise(rate[0], end - origin, later - origin - 0.01, lift, 0.035)
@@ -327,7 +334,7 @@ def contact_s(stroke: Stroke) -> float:
 
 
 def play_voice(voice: Voice, pickup: Pickup, length_s: float, rng: np.random.Generator) -> Array:
-    """Displacement of one voice under each coil, (frames, coils) from the start of the recording."""
+    """Displacement of one voice under each coil, (frames, coils) of the whole recording."""
     modes = string_modes(voice.string, voice.fret, pickup)
     out = np.zeros((round(length_s * RATE), len(pickup.coils_m)))
     begin = round(voice.strokes[0].at * RATE)
@@ -375,7 +382,7 @@ def voices_of(strokes: Iterable[Stroke]) -> list[Voice]:
 
 def sympathy(strings: dict[int, Array], voices: Sequence[Voice], pickup: Pickup) -> Array:
     """Open strings that nobody holds answer the others through the bridge, (frames, coils)."""
-    drive = sum(strings.values()).mean(axis=1)  # type: ignore[union-attr]
+    drive = np.sum(list(strings.values()), axis=0).mean(axis=1)
     force = np.diff(drive, prepend=0.0)
     out = np.zeros((drive.size, len(pickup.coils_m)))
     for number in STRINGS:
@@ -409,7 +416,7 @@ def pick_noise(strokes: Iterable[Stroke], frames: int, rng: np.random.Generator)
 def squeaks(voices: Sequence[Voice], frames: int, rng: np.random.Generator) -> Array:
     """Fingers leaving or sliding along wound strings between two frets, in m/s under the pickup."""
     out = np.zeros(frames)
-    for v, after in zip(voices, voices[1:], strict=False):
+    for v, after in pairwise(voices):
         if v.string < 4 or not v.fret or not np.isfinite(v.leave):
             continue
         n = round(rng.uniform(0.05, 0.11) * RATE)
@@ -424,7 +431,7 @@ def squeaks(voices: Sequence[Voice], frames: int, rng: np.random.Generator) -> A
     return out
 
 
-def jack_response(pickup: Pickup, hz: Array) -> Complex:
+def jack_response(pickup: Pickup, hz: npt.NDArray[np.floating]) -> Complex:
     """Volts at the interface per volt induced: winding L and R against pots, cable and input.
 
     H = 1 / (1 + Z Y) with Z = R + sL and Y the sum of all that lies across the jack.
@@ -464,9 +471,10 @@ def floor_volts(pickup: Pickup, frames: int, rng: np.random.Generator) -> Array:
     white = np.fft.rfft(rng.standard_normal(frames))
     pink = np.sqrt(200.0 / np.maximum(hz, 20.0) + 0.02)
     shaped = np.fft.irfft(white * pink * np.abs(jack_response(pickup, hz)), frames)
-    hiss = np.fft.irfft(np.fft.rfft(rng.standard_normal(frames)), frames)
+    hiss = rng.standard_normal(frames)
     floor = 10 ** (-92 / 20) * FULL_SCALE_V / np.sqrt(2)
-    return out + floor * shaped / np.std(shaped) + 0.15 * floor * hiss
+    out += floor * shaped / np.std(shaped) + 0.15 * floor * hiss
+    return out
 
 
 def _hum_shape() -> Array:
@@ -476,7 +484,12 @@ def _hum_shape() -> Array:
 
 
 def perform(
-    strokes: Sequence[Stroke], pickup: Pickup, length_s: float, seed: int, *, open_ring: bool = False
+    strokes: Sequence[Stroke],
+    pickup: Pickup,
+    length_s: float,
+    seed: int,
+    *,
+    open_ring: bool = False,
 ) -> Array:
     """Volts at the jack of a whole recording, (frames,)."""
     rng = np.random.default_rng(seed)
@@ -485,7 +498,7 @@ def perform(
     strings: dict[int, Array] = {}
     for voice in voices:
         wave = play_voice(voice, pickup, length_s, rng)
-        strings[voice.string] = strings.get(voice.string, 0.0) + wave
+        strings[voice.string] = strings[voice.string] + wave if voice.string in strings else wave
     if open_ring:
         strings[0] = sympathy(strings, voices, pickup)
     other = pick_noise(strokes, frames, rng) + squeaks(voices, frames, rng)
@@ -494,9 +507,9 @@ def perform(
 
 # --- the three pieces -------------------------------------------------------------------------
 
-NECK_SINGLE = Pickup((0.160,), 0.125, 2.8, 6.5e3, 250e3, hum_db=-80)
-MIDDLE_SINGLE = Pickup((0.098,), 0.125, 2.8, 6.5e3, 250e3, hum_db=-79)
-BRIDGE_HUMBUCKER = Pickup((0.036, 0.055), 0.20, 4.7, 8.5e3, 500e3, hum_db=-86)
+NECK_SINGLE = Pickup((0.160,), 0.115, 2.8, 6.5e3, 250e3, hum_db=-80)
+MIDDLE_SINGLE = Pickup((0.098,), 0.115, 2.8, 6.5e3, 250e3, hum_db=-79)
+BRIDGE_HUMBUCKER = Pickup((0.036, 0.055), 0.13, 4.7, 8.5e3, 500e3, hum_db=-86, eddy_ohm=450e3)
 
 # beat, string, fret, length in beats, height of the pluck in mm, vibrato in cents
 QUIET = [
@@ -554,7 +567,7 @@ STRUMS = [
 RIFF = [
     "E0m .   E0m E0m E3P -   -   E0m E0m A1s -   E0m E0m E1P -   -",
     "E0m .   E0m E0m A2P -   -   E0m A0m A0m A1P -   E0m E3s E1s -",
-    "E0m .   E0m E0m E3P -   -   E0m E0m A1s -   A0m A0m A4P -   -",
+    "E0m .   E0m E0m E3P -   -   E0m E0m A1s -   A0m A0m A3P -   -",
     "E0m E0m E6P -   -   E0m E0m E5P -   -   E0m A0m A1s E3s E1s -",
     "E0P -   -   -   -   -   E0m E0m E1P -   .   E0m E0P -   -   -",
 ]
@@ -565,7 +578,9 @@ def quiet_picking() -> Array:
     rng = np.random.default_rng(11)
     beat, strokes = 60 / 74, []
     for at, string, fret, length, mm, cents in QUIET:
-        start = 0.7 + at * beat + 0.011 * rng.standard_normal() + 0.012 * (4 - string) * (at % 1 == 0)
+        start = (
+            0.7 + at * beat + 0.011 * rng.standard_normal() + 0.012 * (4 - string) * (at % 1 == 0)
+        )
         strokes.append(
             Stroke(
                 at=start,
@@ -582,7 +597,7 @@ def quiet_picking() -> Array:
 
 
 def strum(shape: str, kind: str, at: float, until: float, rng: np.random.Generator) -> list[Stroke]:
-    """One stroke over a chord: string after string, from the low side down, from the high side up."""
+    """One stroke over a chord: string after string, down from string 6 or up from string 1."""
     numbers = [6 - i for i, fret in enumerate(shape) if fret != "x"]
     if kind == "p":
         numbers = numbers[:3]
@@ -590,7 +605,7 @@ def strum(shape: str, kind: str, at: float, until: float, rng: np.random.Generat
         numbers = numbers[::-1][: int(rng.integers(3, 5))]
     elif kind == "d":
         numbers = numbers[: int(rng.integers(4, 6))]
-    force = {"D": 1.0, "U": 0.8, "d": 0.75, "u": 0.55, "p": 1.25, "x": 0.9}[kind]
+    force = {"D": 1.0, "U": 0.9, "d": 0.85, "u": 0.7, "p": 1.15, "x": 0.95}[kind]
     gap = {"D": 0.011, "d": 0.013, "p": 0.006, "x": 0.007}.get(kind, 0.007)
     pick_m, moment, strokes = 0.12 + 0.01 * rng.standard_normal(), at, []
     for number in numbers:
@@ -600,7 +615,7 @@ def strum(shape: str, kind: str, at: float, until: float, rng: np.random.Generat
                 string=number,
                 fret=int(shape[6 - number]),
                 until=until,
-                height_m=1e-3 * force * float(np.exp(0.16 * rng.standard_normal())),
+                height_m=1e-3 * force * float(np.exp(0.12 * rng.standard_normal())),
                 pick_m=pick_m + 0.002 * rng.standard_normal(),
                 palm=0.6 * (kind == "p"),
                 choke_per_s=55.0 * (kind == "x"),
@@ -613,7 +628,7 @@ def strum(shape: str, kind: str, at: float, until: float, rng: np.random.Generat
 
 def strummed_chords() -> Array:
     """Open and barre chords, down and up, some palm-muted or choked, over the middle pickup."""
-    rng = np.random.default_rng(21)
+    rng = np.random.default_rng(421)
     quaver, strokes = 60 / 104 / 2, []
     for bar, (name, pattern) in enumerate(STRUMS):
         end = 0.6 + (bar + 1) * 8 * quaver - 0.03 + (0.75 if bar + 1 == len(STRUMS) else 0)
@@ -624,7 +639,7 @@ def strummed_chords() -> Array:
             at = 0.6 + (bar * 8 + i) * quaver + late - 0.015
             until = end if kind != "x" else at + quaver * 0.9
             strokes += strum(SHAPES[name], kind, at, until + 0.008 * rng.standard_normal(), rng)
-    return perform(strokes, MIDDLE_SINGLE, 18.4, 22)
+    return perform(strokes, MIDDLE_SINGLE, 18.4, 422)
 
 
 def riff_strokes(token: str, at: float, until: float, rng: np.random.Generator) -> list[Stroke]:
@@ -641,7 +656,7 @@ def riff_strokes(token: str, at: float, until: float, rng: np.random.Generator) 
             string=string,
             fret=number,
             until=until,
-            height_m=(3.2 if muted else 2.1) * 1e-3 * float(np.exp(0.1 * rng.standard_normal())),
+            height_m=(2.6 if muted else 1.8) * 1e-3 * float(np.exp(0.07 * rng.standard_normal())),
             pick_m=0.075 + 0.005 * rng.standard_normal(),
             palm=float(np.clip(0.9 + 0.1 * rng.standard_normal(), 0.6, 1.1)) * muted,
             up=muted and bool(rng.random() < 0.25),
