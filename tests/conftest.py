@@ -5,10 +5,13 @@ from typing import Any
 
 import numpy as np
 import pytest
+from hypothesis import settings
 
 from tonesim.design import Design, build_design
 
 pytest.register_assert_rewrite("processor_laws")
+settings.register_profile("seeded", derandomize=True, deadline=None)
+settings.load_profile("seeded")
 
 
 @pytest.fixture

@@ -54,7 +54,9 @@ def darlington_law(part: Transistor, ic_total: float) -> tuple[float, float]:
             ic1 = 0.5 * (low + high)
             ib1 = ic1 * (1.0 + (ic1 / part.first_knee_a) ** part.first_knee_exponent)
             ib1 /= part.first_hfe
-            low, high = (ic1, high) if ic1 + ib1 < ie1 else (low, ic1)
+            # The second base also gets what runs through R1 from the first.
+            through_r1 = VT * math.log(ic1 / part.first_is_a + 1.0) / part.first_base_emitter_ohm
+            low, high = (ic1, high) if ic1 + ib1 + through_r1 < ie1 else (low, ic1)
         vbe1 = VT * math.log(ic1 / part.first_is_a + 1.0)
         return vbe1 + vbe2, ib1 + vbe1 / part.first_base_emitter_ohm, ic1 + ic2
 

@@ -22,9 +22,7 @@ EBERS_MOLL = BipolarParams(1e-14, VT, VT, 100.0, 1e12, 1.0, 0.5)
 LAWS = {"plain knee": POWER, "steep knee": POWER._replace(m=2.0), "no knee": EBERS_MOLL}
 
 
-@given(
-    law=st.sampled_from(sorted(LAWS)), v_be=st.floats(-3.0, 1.2), v_bc=st.floats(-20.0, 0.9)
-)
+@given(law=st.sampled_from(sorted(LAWS)), v_be=st.floats(-3.0, 1.2), v_bc=st.floats(-20.0, 0.9))
 def test_the_slopes_are_the_derivatives_of_the_currents(law, v_be, v_bc):
     p = LAWS[law]
     step = 1e-6

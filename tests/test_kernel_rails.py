@@ -74,7 +74,8 @@ def test_the_ripple_of_a_stiff_winding_is_exact(crest, amps, farads, hertz, ripp
 
 # W. Stegall, note on ripple (2009): 3.5 A, 6800 uF and a ripple of 120 Hz give 4.29 V.
 def test_the_triangle_estimate_of_a_published_example_is_an_upper_bound():
-    assert 3.5 / (120.0 * 6800e-6) == pytest.approx(4.29, abs=5e-3)
+    triangle = 3.5 / (120.0 * 6800e-6)
+    assert triangle == pytest.approx(4.29, abs=5e-3)
     for ohm in (0.005, 0.1, 0.5):
         rail = _transformer(40.0, ohm, 6800e-6, r_source=ohm, esr=0.0, v_diode=0.0)
         ripple = _ripple(rail_at_rest(rail, 3.5, 60.0))
@@ -166,9 +167,7 @@ def test_the_rail_agrees_with_an_ode_solver():
     found = rail_at_rest(rail, 1.0, 50.0)
     # One explicit step of 2.6 us moves the capacitor by half a millivolt.
     assert solved.y[0, -1] == pytest.approx(start, abs=1e-3)
-    assert (min(v_rail), max(v_rail)) == pytest.approx(
-        (found.lowest_v, found.highest_v), abs=1e-3
-    )
+    assert (min(v_rail), max(v_rail)) == pytest.approx((found.lowest_v, found.highest_v), abs=1e-3)
 
 
 @pytest.mark.parametrize("v_open", [14.0, 28.51])
@@ -223,7 +222,7 @@ def test_a_source_is_stable_whatever_its_parts(ohm, farads, amps):
     for _ in range(50):
         v, _, _ = rail_step(v, amps, 0.0, DT, rail)
         gap = abs(v - (15.0 - ohm * amps))
-        assert gap <= last + 1e-12
+        assert gap <= last + 1e-11  # round-off of voltages up to 30 V
         last = gap
 
 

@@ -1,5 +1,7 @@
 """Transfer surfaces against the device laws and against a reference spline."""
 
+import itertools
+
 import numpy as np
 import pytest
 from conftest import make_design
@@ -201,7 +203,9 @@ def test_a_corner_gets_a_slope_that_does_not_overshoot():
 
 def test_a_slope_is_zero_where_the_data_turn_round():
     us = np.arange(5.0)
-    slopes = _limited(np.array([0.0, 1.0, 2.0, 1.0, 0.0]), np.array([1.0, 1.0, 0.9, -1.0, -1.0]), us)
+    slopes = _limited(
+        np.array([0.0, 1.0, 2.0, 1.0, 0.0]), np.array([1.0, 1.0, 0.9, -1.0, -1.0]), us
+    )
     assert list(slopes) == [1.0, 1.0, 0.0, -1.0, -1.0]
 
 
@@ -223,5 +227,5 @@ def test_rising_data_give_a_rising_cubic_whatever_the_slopes(rises, slope, width
     slopes = _limited(values, np.array(slope[: us.size]), us)
     spline = CubicHermiteSpline(us, values, slopes)
     steepest = np.max(np.abs(slopes)) + np.max(np.diff(values) / np.diff(us))
-    for a, b in zip(us[:-1], us[1:], strict=True):
+    for a, b in itertools.pairwise(us):
         assert np.all(spline(np.linspace(a, b, 50), 1) >= -1e-9 * (1.0 + steepest))

@@ -10,11 +10,13 @@ The modules, in the order in which one may import another (never the other way r
 - `tonesim.design`: design files and presets to a checked `Design`
 - `tonesim.circuit`: a design to bare numbers
 - `tonesim.curve`: transfer surfaces, idle point, clip levels
+- `tonesim.check`: a stage at rest in the figures of the bench
 - `tonesim.oversample`: up to the internal rate and down again
 - `tonesim.processor`: the stage as a processor of blocks, `Amplifier`
 - `tonesim.wav`: recordings in, results out
 - `tonesim.level`: loudness, peak, gain
 - `tonesim.cabinet`: the cabinet as a filter
+- `tonesim.report`: what a render is asked for and tells, and where its files may go
 - `tonesim.render`: a recording through a design into a file
 - `tonesim.demo`: the shipped recordings through three presets, and what to listen for
 - `tonesim.show`: text on the terminal

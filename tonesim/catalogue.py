@@ -330,7 +330,7 @@ def conduction(part: Transistor, device_a: float, temperature_c: float = 25.0) -
     Notes
     -----
     VBE = Vt ln(IC/Is + 1) + IE Re + IB Rb. In a Darlington the first device carries
-    IE1 = IB2 + (VBE2 + IE2 Re2)/R2 and the base IB1 + VBE1/R1.
+    IE1 = IB2 + (VBE2 + IE2 Re2)/R2 - VBE1/R1 and the base IB1 + VBE1/R1.
     """
     v_t = thermal_voltage(temperature_c)
     warmth = max(1.0 + part.hfe_per_k * (temperature_c - 25.0), 0.1)
@@ -343,14 +343,17 @@ def conduction(part: Transistor, device_a: float, temperature_c: float = 25.0) -
     r_1, r_2 = part.first_base_emitter_ohm or math.inf, part.base_emitter_ohm or math.inf
     first_is, first_hfe = part.first_is_a or math.inf, (part.first_hfe or math.inf) * warmth
     knee = part.first_knee_a or math.inf
-    emitter = base + vbe / r_2
-    collector = emitter
-    for _ in range(12):  # contracts by about 1/hfe a round
+    i_s = saturation_current(first_is, 1.0, part.eg_ev, part.xti, temperature_c)
+    wanted = base + vbe / r_2
+    collector = emitter = wanted
+    vbe_first = 0.0
+    for _ in range(30):  # contracts by about 1/hfe a round
+        # R1 ends at the second base too and brings a part of what it wants.
+        emitter = max(wanted - vbe_first / r_1, 0.0)
         collector = emitter / (
             1.0 + (1.0 + (collector / knee) ** part.first_knee_exponent) / first_hfe
         )
-    i_s = saturation_current(first_is, 1.0, part.eg_ev, part.xti, temperature_c)
-    vbe_first = v_t * math.log1p(collector / i_s)
+        vbe_first = v_t * math.log1p(collector / i_s)
     return Conduction(vbe + vbe_first, emitter - collector + vbe_first / r_1, device_a + collector)
 
 

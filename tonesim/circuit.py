@@ -184,40 +184,38 @@ def lower_driver(design: Design) -> DriverParams:
     """Op-amp and feedback network.
 
     The two listed swings (into 10 kilohm and 2 kilohm) give the output resistance and the
-    voltage the stage behind it stops at, on either side.
+    voltage the stage behind it stops at, for either side.
     """
     driver = design.driver
     part: OpAmp = driver.part
     light, heavy = 10e3, 2e3
 
-    def resistance(swing_light: float, swing_heavy: float) -> float:
-        return (swing_light - swing_heavy) / (swing_heavy / heavy - swing_light / light)
+    def side(swing_light: float, swing_heavy: float, limit: float) -> tuple[float, float]:
+        i_light, i_heavy = swing_light / light, swing_heavy / heavy
+        # The smooth current limit already costs something at the heavier load.
+        r_light = i_light / math.sqrt(1.0 - min(i_light / limit, 0.99) ** 2)
+        r_heavy = i_heavy / math.sqrt(1.0 - min(i_heavy / limit, 0.99) ** 2)
+        r = max((swing_light - swing_heavy) / (r_heavy - r_light), _LEAST_OUTPUT_OHM)
+        return r, part.at_rail_v - swing_heavy - r * r_heavy
 
-    sides = (
-        (part.swing_10k_positive_v, part.swing_2k_positive_v, part.source_limit_a),
-        (-part.swing_10k_negative_v, -part.swing_2k_negative_v, part.sink_limit_a),
+    r_source, drop_positive = side(
+        part.swing_10k_positive_v, part.swing_2k_positive_v, part.source_limit_a
     )
-    r_out = max(
-        sum(resistance(s[0], s[1]) for s in sides) / len(sides),
-        _LEAST_OUTPUT_OHM,
+    r_sink, drop_negative = side(
+        -part.swing_10k_negative_v, -part.swing_2k_negative_v, part.sink_limit_a
     )
-
-    def drop(swing_heavy: float, limit: float) -> float:
-        share = min(swing_heavy / heavy / limit, 0.99)
-        behind = swing_heavy + r_out * swing_heavy / heavy / math.sqrt(1.0 - share * share)
-        return part.at_rail_v - behind
-
     own = driver.positive_v is not None
     return DriverParams(
         omega=2.0 * math.pi * part.gain_bandwidth_hz,
         slew=part.slew_v_per_s,
         per_a0=1.0 / part.dc_gain,
         beta=driver.ground_leg_ohm / (driver.ground_leg_ohm + driver.feedback_ohm),
-        r_out=r_out,
+        r_source=r_source,
+        r_sink=r_sink,
         i_source=part.source_limit_a,
         i_sink=part.sink_limit_a,
-        drop_positive=drop(sides[0][1], sides[0][2]),
-        drop_negative=drop(sides[1][1], sides[1][2]),
+        drop_positive=drop_positive,
+        drop_negative=drop_negative,
         own_supply=own,
         rail_positive=driver.positive_v if driver.positive_v is not None else 0.0,
         rail_negative=driver.negative_v if driver.negative_v is not None else 0.0,

@@ -25,6 +25,7 @@ _MOST_EMITTER_DROP = 8.0  # the fine zones grow with the emitter resistors' drop
 _RAIL_STEP = 1 / 384_000  # step for rails at rest [s]
 _FAR = 1e6  # input that asks for the clip level [V]
 _KEPT_SURFACES = 16
+_TIE = 0.05  # share by which two limits' effects may differ and still be a tie
 
 
 class Surfaces(NamedTuple):
@@ -87,17 +88,20 @@ def grid_for(circuit: Circuit) -> Grid:
     most_a = max(circuit.rail_positive.v_open, circuit.rail_negative.v_open) / circuit.bench_ohm
     r = max(circuit.upper.r_emitter, circuit.lower.r_emitter)
     drop = float(np.ceil(min(r * most_a, _MOST_EMITTER_DROP)))
+    # A chain of much resistance reaches further down at full headroom.
+    chain = max(half.chain_r * half.g_feed for half in (circuit.upper, circuit.lower))
+    u_low = _U_LOW - float(np.ceil(min(chain * span, _MOST_EMITTER_DROP)))
     single = not (circuit.upper.darlington and circuit.lower.darlington)
     du = _DU_SINGLE if single else _DU_DARLINGTON
-    n_low = int(np.ceil((span + _BEYOND + _U_LOW) / _DU_COARSE))
+    n_low = int(np.ceil((span + _BEYOND + u_low) / _DU_COARSE))
     u_high = _U_HIGH + drop
     h_high = _H_HIGH + drop
     return Grid(
-        u_low=_U_LOW - n_low * _DU_COARSE,
-        u_fine=_U_LOW,
+        u_low=u_low - n_low * _DU_COARSE,
+        u_fine=u_low,
         u_coarse=u_high,
         n_low=n_low,
-        n_fine=round((u_high - _U_LOW) / du),
+        n_fine=round((u_high - u_low) / du),
         n_high=max(1, int(np.ceil((span + _BEYOND - u_high) / _DU_COARSE))),
         du_fine=du,
         du_coarse=_DU_COARSE,
@@ -150,7 +154,7 @@ def build_surface(half: HalfParams, grid: Grid) -> tuple[Table, float, int]:
     Returns
     -------
     table : (H, U, 4) ndarray
-        i_out, di_out/du, i_drive, di_drive/du in amperes and siemens; read-only.
+        i_out, di_out/du, i_drive, di_drive/du in amperes and siemens; shared, not to be written to.
     residual : float
         Worst node equation met, in amperes or volts.
     newton_steps : int
@@ -204,9 +208,9 @@ def rail_at_rest(rail: RailParams, draw_a: float, mains_hz: float) -> Rail:
         end = rail_cycles(v, draw_a, mains_hz, _RAIL_STEP, 1, rail, trace)
         return float(end - v)
 
-    high = rail.v_open
-    low = -rail.v_open
-    v = float(brentq(gap, low, high, xtol=1e-9))
+    # The diode lets nothing above this in, and without a load nothing takes it out.
+    high = rail.v_open - rail.v_diode
+    v = high if draw_a == 0.0 else float(brentq(gap, -rail.v_open, high, xtol=1e-9))
     gap(v)
     return Rail(float(trace[0]), float(trace[1]), float(trace[2]), v)
 
@@ -325,15 +329,23 @@ def _clip(circuit: Circuit, idle: OperatingPoint, sign: float) -> ClipLevel:
                 drop_positive=q.drop_positive - 20, drop_negative=q.drop_negative - 20
             )
         ),
-        "driver current": level(driver=q._replace(i_source=NO_LIMIT, i_sink=NO_LIMIT, r_out=1e-3)),
+        "driver current": level(
+            driver=q._replace(i_source=NO_LIMIT, i_sink=NO_LIMIT, r_source=1e-3, r_sink=1e-3)
+        ),
         "base starvation": level(
             upper=_battery(circuit.upper, chain_voltage(circuit.upper, idle.upper_chain_a)),
             lower=_battery(circuit.lower, chain_voltage(circuit.lower, idle.lower_chain_a)),
         ),
         "saturation": level(extra=20.0),
     }
-    gains = {name: abs(s.v_o) - reach for name, s in lifted.items()}
+    gains = {name: max(abs(s.v_o) - reach, 0.0) for name, s in lifted.items()}
     cause = max(gains, key=lambda name: gains[name])
+    swing, current = gains["driver swing"], gains["driver current"]
+    if cause.startswith("driver") and abs(swing - current) < _TIE * max(swing, current):
+        # Either would do: named is the one that takes more of the op-amp's voltage.
+        lost_v = abs(point.v_x - point.v_d)
+        headroom_v = q.drop_positive if sign > 0 else q.drop_negative
+        cause = "driver current" if lost_v > headroom_v else "driver swing"
     rail = circuit.rail_positive if sign > 0 else circuit.rail_negative
     load_a = reach * g
     if rail.i_limit < NO_LIMIT and load_a > rail.i_limit:

@@ -98,7 +98,7 @@ def open_recording(path: str | os.PathLike[str], *, repair: bool = False) -> Rec
     path = Path(path)
     _check_readable(path)
     try:
-        file = sf.SoundFile(path)
+        file = sf.SoundFile(_native(path))
     except (sf.SoundFileError, TypeError, ValueError) as error:
         reason = str(error).split(": ")[-1].rstrip(".")
         if isinstance(error, TypeError):  # headerless: it would need a rate from elsewhere
@@ -110,6 +110,11 @@ def open_recording(path: str | os.PathLike[str], *, repair: bool = False) -> Rec
         file.close()
         raise
     return Recording(path, file, repair)
+
+
+def _native(path: Path) -> str | bytes:
+    """Return a path as the library takes it: on POSIX its bytes, which need not be any text."""
+    return os.fsencode(path) if os.name == "posix" else str(path)
 
 
 def _check_readable(path: Path) -> None:
@@ -411,7 +416,7 @@ class Writer:
             )
         try:
             return sf.SoundFile(
-                aside,
+                _native(aside),
                 "w",
                 samplerate=self._sample_rate,
                 channels=self._channels,
@@ -449,7 +454,7 @@ class Writer:
         try:
             self._file = self._open(self._aside)
             kind = "float64" if self._encoding in ("FLOAT", "DOUBLE") else "int32"
-            with sf.SoundFile(narrow) as source:
+            with sf.SoundFile(_native(narrow)) as source:
                 for block in source.blocks(65536, dtype=kind, always_2d=True):
                     self._put(self._file, block)
         finally:

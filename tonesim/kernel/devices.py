@@ -12,7 +12,7 @@ transistor's data sheet can fix (Sedra & Smith, "Microelectronic Circuits", ch. 
 import math
 from typing import NamedTuple
 
-from tonesim.kernel.jit import inlined, kernel
+from tonesim.kernel.jit import kernel
 
 # Above this exponent the exponential goes on as a straight line, so that no start overflows.
 _STRAIGHT = 90.0
@@ -31,7 +31,7 @@ class BipolarParams(NamedTuple):
     beta_r: float  # reverse current gain
 
 
-@inlined
+@kernel
 def exp_straight(x):
     """exp(x) and its slope, continued as a straight line above 90."""
     if x > _STRAIGHT:
@@ -40,7 +40,7 @@ def exp_straight(x):
     return e, e
 
 
-@inlined
+@kernel
 def junction(v, i_s, n_vt):
     """Current and conductance of a junction, Is (exp(v / nVt) - 1)."""
     e, slope = exp_straight(v / n_vt)

@@ -1,7 +1,7 @@
 """Op-amp as a driver: integrator with slew limit, output resistance with current limit.
 
     dv_x/dt = SR s(2 pi GBW (v_in - beta v_o - v_x / A0) / SR),   s(y) = y / sqrt(1 + y^2)
-    i_amp   = I s(e / (R I)) + e g,   e = v_x - v_d,  I the source or the sink limit
+    i_amp   = I s(e / (R I)) + e g,   e = v_x - v_d,  R, I of the source or the sink side
 
 The integrator itself stops at the swing limits, so that it never winds up.
 """
@@ -21,7 +21,8 @@ class DriverParams(NamedTuple):
     slew: float  # V/s
     per_a0: float  # 1 / DC gain
     beta: float  # ground leg / (ground leg + feedback)
-    r_out: float  # ohm
+    r_source: float  # output resistance while it gives current, ohm
+    r_sink: float  # while it takes current, ohm
     i_source: float  # ampere
     i_sink: float  # ampere
     drop_positive: float  # swing limit below the positive rail, volt
@@ -43,10 +44,12 @@ def slewed(y):
 @kernel
 def output_current(e, p):
     """Current out of the op-amp for the voltage e across its output resistance; slope."""
-    limit = p.i_source if e > 0.0 else p.i_sink
-    r = p.r_out * limit
-    s, slope = slewed(e / r)
-    return limit * s + LEAK * e, slope / p.r_out + LEAK
+    if e > 0.0:
+        r, limit = p.r_source, p.i_source
+    else:
+        r, limit = p.r_sink, p.i_sink
+    s, slope = slewed(e / (r * limit))
+    return limit * s + LEAK * e, slope / r + LEAK
 
 
 @kernel

@@ -224,6 +224,13 @@ def eliminate(j, f):
 @kernel
 def first_guess(u, h, p, x):
     """A start with every junction cut off, from which Newton always gets home."""
+    x[3] = 0.0
+    if p.chain == CHAIN_NONE and u > h:
+        # The drive holds the base above its collector.
+        x[0] = 0.0
+        x[1] = min(u, 0.0)
+        x[2] = min(u - h, 0.4)
+        return
     base = min(u, h, 0.0)
     if p.darlington:
         x[1] = min(base * p.g_1 / (p.g_1 + p.g_2), h)
@@ -232,7 +239,6 @@ def first_guess(u, h, p, x):
         x[0] = 0.0
         x[1] = base
     x[2] = base - h
-    x[3] = 0.0
 
 
 @kernel
