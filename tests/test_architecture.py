@@ -30,14 +30,17 @@ RANKS: dict[str, int] = {
     "circuit": 7,
     "curve": 8,
     "oversample": 8,
+    "check": 9,
     "processor": 9,
     "wav": 10,
     "level": 10,
     "cabinet": 10,
-    "render": 11,
-    "show": 12,
-    "cli": 13,
-    "__main__": 14,
+    "report": 11,
+    "render": 12,
+    "demo": 13,
+    "show": 14,
+    "cli": 15,
+    "__main__": 16,
 }
 # Which modules may import a library; "kernel" stands for everything in that folder.
 DOORS: dict[str, set[str]] = {
