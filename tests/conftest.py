@@ -14,6 +14,14 @@ settings.register_profile("seeded", derandomize=True, deadline=None)
 settings.load_profile("seeded")
 
 
+@pytest.fixture(scope="session", autouse=True)
+def compiled() -> None:
+    """Compile once, so that no test depends on what ran before it."""
+    from tonesim.processor import Amplifier
+
+    Amplifier(make_design()).prepare(48_000, 64)
+
+
 @pytest.fixture
 def rng() -> np.random.Generator:
     return np.random.default_rng(20260)

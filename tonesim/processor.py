@@ -197,6 +197,13 @@ class Amplifier:
         return self._oversampler.latency
 
     @property
+    def rest_v(self) -> float:
+        """Output voltage at rest, in volts."""
+        if self._block == 0:
+            raise UsageError(_PREPARE_FIRST)
+        return self._rest_v
+
+    @property
     def evidence(self) -> Evidence:
         """What the solver did since the last reset."""
         if self._block == 0:

@@ -65,8 +65,8 @@ Progress = Callable[[float], None]
 def compiled() -> bool:
     """Whether the solver's machine code lies on disk, ready to be loaded.
 
-    Looks for the compiler's index file and compares dates only; if it errs, the solver is compiled
-    without notice.
+    Looks for the compiler's index file only (`kernel.jit` has dropped what is stale); if it errs,
+    the solver is compiled without notice.
     """
     stats = getattr(advance, "stats", None)
     if stats is None:  # the compiler is switched off
@@ -117,9 +117,9 @@ class _Voice:
         self._full_scale_v = design.input.full_scale_v
         self.stage = Amplifier(design, multiply=options.multiply)
         self.stage.prepare(rate, options.block_frames)
-        # At rest both extremes are the resting voltage; the cabinet begins at zero, so it gets the
+        # The cabinet begins at zero, so it gets the
         # distance from rest, and rest itself is seen by it as a steady voltage.
-        self._rest_v = self.stage.evidence.highest_v
+        self._rest_v = self.stage.rest_v
         response = cabinet_response(design, rate)
         self.cabinet = None if response is None else Cabinet(*response, rate)
         self._settled_v = 0.0
