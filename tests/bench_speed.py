@@ -14,7 +14,7 @@ import numpy as np
 from tonesim.cabinet import Cabinet, shape_response
 from tonesim.circuit import lower
 from tonesim.curve import build_surface, grid_for
-from tonesim.design import demo_audio_folder, list_presets, load_design
+from tonesim.designfile import demo_audio_folder, list_presets, load_design
 from tonesim.oversample import Oversampler
 from tonesim.processor import Amplifier
 from tonesim.wav import open_recording

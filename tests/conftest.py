@@ -7,7 +7,8 @@ import numpy as np
 import pytest
 from hypothesis import settings
 
-from tonesim.design import Design, build_design
+from tonesim.design import Design
+from tonesim.designfile import build_design
 
 pytest.register_assert_rewrite("processor_laws")
 settings.register_profile("seeded", derandomize=True, deadline=None)

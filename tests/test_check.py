@@ -9,7 +9,7 @@ from conftest import make_design
 from tonesim import check as check_module
 from tonesim.catalogue import diode_drop
 from tonesim.check import HalfAtRest, check_design
-from tonesim.design import list_presets, load_design
+from tonesim.designfile import list_presets, load_design
 from tonesim.errors import SolverError
 
 

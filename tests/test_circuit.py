@@ -13,7 +13,7 @@ from scipy.optimize import brentq
 from tonesim import catalogue
 from tonesim.catalogue import conduction, diode_drop, load_catalogue
 from tonesim.circuit import lower, lower_half, lower_rails, saturation_current
-from tonesim.design import list_presets, load_design
+from tonesim.designfile import list_presets, load_design
 from tonesim.kernel.half import (
     CHAIN_DROPS,
     CHAIN_MULTIPLIER,

@@ -19,7 +19,7 @@ from click.testing import CliRunner, Result
 
 import tonesim
 from tonesim.cli import INTERRUPTED, commands
-from tonesim.design import build_design, list_presets, load_design
+from tonesim.designfile import build_design, list_presets, load_design
 
 RATE = 48_000
 ROOT = Path(__file__).parent.parent

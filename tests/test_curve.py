@@ -23,8 +23,9 @@ from tonesim.curve import (
     rail_at_rest,
     static_point,
 )
-from tonesim.design import estimate_idle, list_presets, load_design
+from tonesim.designfile import list_presets, load_design
 from tonesim.kernel.half import chain_law
+from tonesim.limits import estimate_idle
 from tonesim.processor import Amplifier
 
 PRESETS = list_presets()

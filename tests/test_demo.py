@@ -11,7 +11,7 @@ from conftest import make_design
 
 from tonesim import demo as demo_module
 from tonesim.demo import PRESETS, REFERENCE, DemoReport, run_demo, total_distortion
-from tonesim.design import load_design
+from tonesim.designfile import load_design
 from tonesim.errors import OutputError, RecordingError
 from tonesim.processor import Amplifier
 

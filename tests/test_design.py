@@ -10,21 +10,19 @@ from hypothesis import given, settings
 from hypothesis import strategies as st
 
 from tonesim.catalogue import conduction, load_catalogue
-from tonesim.design import (
-    BatterySupply,
-    BenchSupply,
-    Design,
-    TransformerSupply,
+from tonesim.design import BatterySupply, BenchSupply, Design, TransformerSupply
+from tonesim.designfile import (
     build_design,
     demo_audio_folder,
     design_key,
     design_to_toml,
-    estimate_idle,
     list_presets,
     load_design,
     presets_folder,
+    replace,
 )
 from tonesim.errors import DesignError
+from tonesim.limits import cautions, estimate_idle
 
 # An invented bench amplifier that the tests change one thing at a time.
 BENCH = """\
@@ -344,7 +342,7 @@ def test_a_very_hot_but_lawful_idle_is_accepted_with_a_caution(bench: Path) -> N
     silicon = "1N4148,1N4148"
     design = load_design(bench, [f"bias.upper={silicon}", f"bias.lower={silicon}"])
     assert 0.15 < estimate_idle(design).current_a < 0.5
-    assert any("heatsink" in caution for caution in design.cautions())
+    assert any("heatsink" in caution for caution in cautions(design))
 
 
 # --- idle current, from the explicit laws
@@ -402,9 +400,9 @@ def test_idle_falls_with_the_feed_resistor_and_with_the_emitter_resistor(
     feed_ohm: float, emitter_ohm: float
 ) -> None:
     design = build_design(tables())
-    here = design.replace(bias={"feed_ohm": feed_ohm}, output={"emitter_ohm": emitter_ohm})
-    less_feed = here.replace(bias={"feed_ohm": 1.2 * feed_ohm})
-    more_emitter = here.replace(output={"emitter_ohm": emitter_ohm + 0.1})
+    here = replace(design, bias={"feed_ohm": feed_ohm}, output={"emitter_ohm": emitter_ohm})
+    less_feed = replace(here, bias={"feed_ohm": 1.2 * feed_ohm})
+    more_emitter = replace(here, output={"emitter_ohm": emitter_ohm + 0.1})
     idle = estimate_idle(here).current_a
     assert estimate_idle(less_feed).current_a < idle
     assert estimate_idle(more_emitter).current_a < idle
@@ -449,12 +447,12 @@ def test_idle_falls_with_the_feed_resistor_and_with_the_emitter_resistor(
 def test_doubtful_designs_load_with_a_caution(
     bench: Path, changes: list[str], words: list[str]
 ) -> None:
-    cautions = load_design(bench, changes).cautions()
-    assert any(all(word in caution for word in words) for caution in cautions), cautions
+    found = cautions(load_design(bench, changes))
+    assert any(all(word in caution for word in words) for caution in found), found
 
 
 def test_a_sound_design_has_no_cautions(bench: Path) -> None:
-    assert load_design(bench).cautions() == []
+    assert cautions(load_design(bench)) == []
 
 
 # --- changes on the command line
@@ -532,14 +530,14 @@ def test_what_is_no_override_is_refused(bench: Path, override: str, words: list[
 
 def test_replace_changes_only_what_is_named(bench: Path) -> None:
     design = load_design(bench)
-    changed = design.replace(bias={"feed_ohm": "3k9", "upper": ["1N4148"]}, title="Other")
+    changed = replace(design, bias={"feed_ohm": "3k9", "upper": ["1N4148"]}, title="Other")
     assert (changed.bias.feed_ohm, len(changed.bias.upper), changed.title) == (3900.0, 1, "Other")
     assert changed.bias.lower == design.bias.lower
     assert changed.output == design.output
     assert design.bias.feed_ohm == 4700.0
-    dotted = design.replace(**{"output.upper": "TIP120", "output.lower": "TIP125"})
+    dotted = replace(design, **{"output.upper": "TIP120", "output.lower": "TIP125"})
     assert dotted.output.upper == PARTS.transistor("TIP120")
-    model = design.replace(**{"output.upper": PARTS.transistor("TIP120")})
+    model = replace(design, **{"output.upper": PARTS.transistor("TIP120")})
     assert model.output.upper == PARTS.transistor("TIP120")
 
 
@@ -552,23 +550,23 @@ def test_replace_checks_again(bench: Path) -> None:
         ({"bias.fed_ohm": 3}, "bias.feed_ohm"),
     ):
         with pytest.raises(DesignError, match=words):
-            design.replace(**changes)
+            replace(design, **changes)
 
 
 def test_replace_can_take_a_section_away_or_put_another_in_its_place() -> None:
     design = load_design("no-chain")
-    assert design.replace(cabinet=None).cabinet is None
-    bench_supply = design.replace(supply={"kind": "bench", "positive_v": 15}).supply
+    assert replace(design, cabinet=None).cabinet is None
+    bench_supply = replace(design, supply={"kind": "bench", "positive_v": 15}).supply
     assert isinstance(bench_supply, BenchSupply)
-    assert design.replace(**{"load.ohm": 8}).load.part is None
+    assert replace(design, **{"load.ohm": 8}).load.part is None
 
 
 def test_a_part_changed_by_replace_is_marked(bench: Path) -> None:
-    part = load_design(bench).replace(**{"output.upper.hfe": 60}).output.upper
+    part = replace(load_design(bench), **{"output.upper.hfe": 60}).output.upper
     assert (part.name, part.hfe) == ("TIP122, changed", 60.0)
     assert "Changed in the design: hfe." in part.source
     fresh = {"output.upper": PARTS.transistor("TIP120"), "output.upper.hfe": 60}
-    assert load_design(bench).replace(**fresh).output.upper.name == "TIP120, changed"
+    assert replace(load_design(bench), **fresh).output.upper.name == "TIP120, changed"
 
 
 def test_a_design_cannot_be_changed_in_place(bench: Path) -> None:
@@ -581,7 +579,7 @@ def test_the_key_follows_everything_heard_and_nothing_else(bench: Path) -> None:
     key = design_key(design)
     assert len(key) == 64
     assert design_key(load_design(bench)) == key
-    assert design_key(design.replace(title="Other", notes="x")) == key
+    assert design_key(replace(design, title="Other", notes="x")) == key
     for change in ("bias.feed_ohm=4k8", "output.upper.hfe=99", "output.temperature_c=26"):
         assert design_key(load_design(bench, [change])) != key
 
@@ -690,8 +688,8 @@ def test_the_well_biased_presets_idle_near_the_optimum(name: str) -> None:
 
 
 def test_the_current_limited_preset_says_so() -> None:
-    cautions = load_design("single-pair-current-limit").cautions()
-    assert any("NJM4558 gives 25 mA" in caution for caution in cautions)
+    found = cautions(load_design("single-pair-current-limit"))
+    assert any("NJM4558 gives 25 mA" in caution for caution in found)
 
 
 def test_shipped_folders_are_there() -> None:

@@ -11,7 +11,7 @@ import pytest
 from click.testing import CliRunner
 
 from tonesim import cli
-from tonesim.design import build_design
+from tonesim.designfile import build_design
 
 ROOT = Path(__file__).parent.parent
 README = (ROOT / "README.md").read_text()

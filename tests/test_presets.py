@@ -11,7 +11,7 @@ import pytest
 
 from tonesim.circuit import lower
 from tonesim.curve import clip_levels, idle_point
-from tonesim.design import demo_audio_folder, list_presets, load_design
+from tonesim.designfile import demo_audio_folder, list_presets, load_design
 from tonesim.processor import Amplifier
 from tonesim.signals import Signal
 from tonesim.wav import open_recording

@@ -9,7 +9,7 @@ from hypothesis import strategies as st
 
 from tonesim.circuit import lower
 from tonesim.curve import idle_point
-from tonesim.design import list_presets, load_design
+from tonesim.designfile import list_presets, load_design, replace
 from tonesim.errors import UsageError
 from tonesim.processor import Amplifier
 from tonesim.signals import Signal, sine, square
@@ -58,7 +58,7 @@ def test_threads_do_not_meet():
 
 
 def test_silence_stays_at_the_idle_point():
-    design = load_design("lopsided-rails").replace(**{"driver.offset_v": 0.003})
+    design = replace(load_design("lopsided-rails"), **{"driver.offset_v": 0.003})
     idle = idle_point(lower(design)).output_v
     assert abs(idle) > 0.01
     # Static and moving solution differ by the surfaces' interpolation error.

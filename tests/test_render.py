@@ -16,7 +16,8 @@ import soundfile as sf
 from conftest import make_design
 
 from tonesim import render as render_module
-from tonesim.design import Design, design_key, list_presets, load_design
+from tonesim.design import Design
+from tonesim.designfile import design_key, list_presets, load_design, replace
 from tonesim.errors import OutputError, RecordingError, SolverError, UsageError
 from tonesim.processor import Amplifier
 from tonesim.render import (
@@ -41,7 +42,7 @@ def linear_design() -> Design:
 
 
 def with_cabinet(design: Design) -> Design:
-    return design.replace(cabinet={"part": "open-back-12"})
+    return replace(design, cabinet={"part": "open-back-12"})
 
 
 def record(path: Path, x: Signal, rate: int = RATE, subtype: str = "PCM_24") -> Path:
@@ -106,7 +107,7 @@ def test_with_a_cabinet_the_result_is_the_cabinet_s_own_answer(tmp_path):
 
 
 def test_an_offset_makes_no_thump_in_the_cabinet(tmp_path):
-    design = with_cabinet(load_design("lopsided-rails").replace(**{"driver.offset_v": 0.003}))
+    design = with_cabinet(replace(load_design("lopsided-rails"), **{"driver.offset_v": 0.003}))
     report = render(
         record(tmp_path / "in.wav", np.zeros(4000)),
         tmp_path / "out.wav",
@@ -253,7 +254,7 @@ def test_the_sidecar_tells_all(tmp_path):
 
 
 def test_the_design_in_a_sidecar_renders_to_the_same_bits(tmp_path):
-    from tonesim.design import build_design
+    from tonesim.designfile import build_design
 
     source = record(tmp_path / "in.wav", plucks(3000))
     first = render(source, tmp_path / "a.wav", load_design("no-chain", ["bias.temperature_c=40"]))
@@ -351,7 +352,7 @@ def test_an_input_is_never_written_over(tmp_path):
     before = source.read_bytes()
     (tmp_path / "link.wav").symlink_to(source)
     response = record(tmp_path / "cab.wav", np.array([1.0, 0.5]))
-    design = linear_design().replace(cabinet={"file": str(response)})
+    design = replace(linear_design(), cabinet={"file": str(response)})
     for out in (source, tmp_path / "link.wav", response):
         with pytest.raises(OutputError, match="inputs are never overwritten"):
             render(source, out, design, RenderOptions(replace=True))
@@ -363,13 +364,13 @@ def test_an_impulse_response_file_is_the_cabinet(tmp_path):
     response = record(tmp_path / "cab.wav", np.array([0.0, 0.0, 0.25]), subtype="DOUBLE")
     double = RenderOptions(subtype="double")
     plain = render(source, tmp_path / "plain.wav", linear_design(), double)
-    design = linear_design().replace(cabinet={"file": str(response)})
+    design = replace(linear_design(), cabinet={"file": str(response)})
     heard = render(source, tmp_path / "heard.wav", design, double)
     # What rings before the first frame is lost without the delay, so the comparison begins at it.
     np.testing.assert_allclose(volts(heard)[2:, 0], 0.25 * volts(plain)[:-2, 0], atol=1e-12)
     # Its bytes, not its path, make the key.
     moved = record(tmp_path / "moved.wav", np.array([0.0, 0.0, 0.25]), subtype="DOUBLE")
-    assert design_key(design.replace(cabinet={"file": str(moved)})) == heard.design_key_sha256
+    assert design_key(replace(design, cabinet={"file": str(moved)})) == heard.design_key_sha256
 
 
 def test_a_failure_on_the_way_leaves_nothing(tmp_path, monkeypatch):
@@ -476,7 +477,7 @@ def test_outputs_are_checked_without_touching_them(tmp_path):
 _PEAK = """
 import resource, sys
 from pathlib import Path
-from tonesim.design import load_design
+from tonesim.designfile import load_design
 from tonesim.render import RenderOptions, render
 folder = Path(sys.argv[1])
 options = RenderOptions(match_lufs=-20.0)

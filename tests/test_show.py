@@ -17,7 +17,7 @@ from tonesim import show
 from tonesim.catalogue import load_catalogue
 from tonesim.check import check_design
 from tonesim.demo import DemoReport, Heard, Variant
-from tonesim.design import load_design
+from tonesim.designfile import load_design
 from tonesim.render import render
 from tonesim.report import RenderOptions, RenderReport
 

@@ -7,7 +7,9 @@ The modules, in the order in which one may import another (never the other way r
 - `tonesim.signals`: what a signal is, and test signals
 - `tonesim.kernel`: the compiled numerical core: devices, halves, driver, rails, load, filters
 - `tonesim.catalogue`: parts, their laws and the part files
-- `tonesim.design`: design files and presets to a checked `Design`
+- `tonesim.design`: what a design is: sections, keys, units
+- `tonesim.limits`: what its parts can bear
+- `tonesim.designfile`: design files and presets to a checked `Design`, and back
 - `tonesim.circuit`: a design to bare numbers
 - `tonesim.curve`: transfer surfaces, idle point, clip levels
 - `tonesim.check`: a stage at rest in the figures of the bench

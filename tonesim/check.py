@@ -5,8 +5,10 @@ from typing import Any
 
 from tonesim.circuit import Circuit, lower
 from tonesim.curve import ClipLevel, OperatingPoint, chain_voltage, clip_levels, idle_point
-from tonesim.design import Design, design_key
+from tonesim.design import Design
+from tonesim.designfile import design_key
 from tonesim.errors import SolverError
+from tonesim.limits import cautions
 
 
 @dataclass(frozen=True)
@@ -87,7 +89,7 @@ def check_design(design: Design) -> StageCheck:
         bench_ohm=circuit.bench_ohm,
         clean_w=least**2 / 2.0 / circuit.bench_ohm,
         draw_w=upper.draw_a * upper.rail_v + lower_.draw_a * lower_.rail_v,
-        cautions=tuple(design.cautions()),
+        cautions=tuple(cautions(design)),
         residual_a=idle.residual_a,
         converged=idle.converged,
     )

@@ -120,7 +120,7 @@ _as_json = click.option("--json", "as_json", is_flag=True, help="Print JSON inst
 
 def _load(source: str, changes: Sequence[str], parts_file: str | None) -> tuple[Design, Catalogue]:
     from tonesim.catalogue import load_catalogue
-    from tonesim.design import load_design
+    from tonesim.designfile import load_design
 
     catalogue = load_catalogue(None if parts_file is None else Path(parts_file))
     return load_design(source, changes, catalogue), catalogue
@@ -218,7 +218,7 @@ def render(
 
 def _recording(name: str) -> Path:
     """Path of a recording; the shipped ones are known by their names."""
-    from tonesim.design import demo_audio_folder
+    from tonesim.designfile import demo_audio_folder
 
     shipped = demo_audio_folder() / f"{name}.wav"
     bare = Path(name).name == name and not Path(name).exists()
@@ -244,6 +244,8 @@ def _render_options(given: dict[str, Any]) -> RenderOptions:
 
 def _played(design: Design, catalogue: Catalogue, given: dict[str, Any]) -> Design:
     """Put what the options say about drive and cabinet into the design, so that it is recorded."""
+    from tonesim.designfile import replace
+
     changed: dict[str, Any] = {}
     if given["full_scale"] is not None:
         changed["input.full_scale_v"] = _quantity("--full-scale", given["full_scale"], "V")
@@ -259,7 +261,7 @@ def _played(design: Design, catalogue: Catalogue, given: dict[str, Any]) -> Desi
             changed["cabinet"] = {"file": str(Path(cabinet).resolve())}
         else:
             changed["cabinet"] = {"part": catalogue.cabinet(cabinet).name}
-    return design.replace(catalogue=catalogue, **changed) if changed else design
+    return replace(design, catalogue=catalogue, **changed) if changed else design
 
 
 def _quantity(option: str, text: str, unit: str) -> float:
@@ -392,7 +394,7 @@ def presets(name: str | None, as_json: bool) -> None:
     What is printed is a design file to start from.
     """
     from tonesim.catalogue import nearest, read_toml
-    from tonesim.design import list_presets, presets_folder
+    from tonesim.designfile import list_presets, presets_folder
 
     known = list_presets()
     if name is not None and name not in known:

@@ -17,7 +17,8 @@ from typing import Any
 import numpy as np
 
 from tonesim.check import StageCheck, check_design
-from tonesim.design import Design, demo_audio_folder, load_design
+from tonesim.design import Design
+from tonesim.designfile import demo_audio_folder, load_design
 from tonesim.errors import RecordingError
 from tonesim.processor import Amplifier
 from tonesim.render import CEILING_DBTP, Progress, perform

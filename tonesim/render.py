@@ -117,8 +117,8 @@ class _Voice:
         self._full_scale_v = design.input.full_scale_v
         self.stage = Amplifier(design, multiply=options.multiply)
         self.stage.prepare(rate, options.block_frames)
-        # The cabinet begins at zero, so it gets the
-        # distance from rest, and rest itself is seen by it as a steady voltage.
+        # The cabinet begins at zero, so it gets the distance from rest, and rest itself is seen by
+        # it as a steady voltage.
         self._rest_v = self.stage.rest_v
         response = cabinet_response(design, rate)
         self.cabinet = None if response is None else Cabinet(*response, rate)

@@ -15,7 +15,8 @@ from pathlib import Path
 from typing import Any
 
 from tonesim import __version__
-from tonesim.design import Design, design_key
+from tonesim.design import Design
+from tonesim.designfile import design_key
 from tonesim.errors import OutputError, RecordingError, UsageError
 from tonesim.processor import Evidence
 from tonesim.wav import RecordingInfo, refuse_same_file, write_text_aside
