@@ -21,10 +21,10 @@ from tonesim.catalogue import (
     conduction,
     diode_drop,
     load_catalogue,
-    nearest,
     saturation_current,
 )
 from tonesim.errors import DesignError
+from tonesim.record import nearest
 
 PARTS = load_catalogue()
 # kT/q at 298.15 K from the exact SI constants, volt.

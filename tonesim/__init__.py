@@ -6,6 +6,7 @@ The modules, in the order in which one may import another (never the other way r
 - `tonesim.units`: quantities as builders write them, decibels, preferred values
 - `tonesim.signals`: what a signal is, and test signals
 - `tonesim.kernel`: the compiled numerical core: devices, halves, driver, rails, load, filters
+- `tonesim.record`: tables of a file as frozen models, errors as sentences
 - `tonesim.catalogue`: parts, their laws and the part files
 - `tonesim.design`: what a design is: sections, keys, units
 - `tonesim.limits`: what its parts can bear

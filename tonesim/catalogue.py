@@ -6,90 +6,30 @@ written by IEC 60062 ("4k7"). ``like = "OTHER"`` starts from another entry. Ever
 meant at 25 °C; transistor laws have the signs of an NPN.
 """
 
-import difflib
-import itertools
 import math
-import tomllib
-from collections.abc import Callable, Iterable, Mapping, Sequence
+from collections.abc import Callable, Mapping
 from dataclasses import dataclass, field
 from functools import lru_cache
 from pathlib import Path
 from types import MappingProxyType
-from typing import Annotated, Any, Literal, NamedTuple, TypeVar, get_args
+from typing import Annotated, Any, Literal, NamedTuple, TypeVar
 
-from pydantic import (
-    BaseModel,
-    BeforeValidator,
-    ConfigDict,
-    Field,
-    ValidationError,
-    ValidationInfo,
-    model_validator,
-)
+from pydantic import BeforeValidator, Field, ValidationError, ValidationInfo, model_validator
 
 from tonesim.errors import DesignError
-from tonesim.units import (
-    BOLTZMANN,
-    ELEMENTARY_CHARGE,
-    T0,
-    kelvin,
-    parse_quantity,
-    thermal_voltage,
+from tonesim.record import (
+    NotNegative,
+    Number,
+    Positive,
+    Record,
+    nearest,
+    problems,
+    read_toml,
+    shown,
 )
+from tonesim.units import BOLTZMANN, ELEMENTARY_CHARGE, T0, kelvin, thermal_voltage
 
-_LARGEST_FILE = 1_000_000  # bytes; a part or design file is a few thousand
 _PARTS = Path(__file__).parent / "parts"
-_UNIT_OF_SUFFIX = {
-    "ohm": "ohm",
-    "v": "V",
-    "f": "F",
-    "h": "H",
-    "a": "A",
-    "w": "W",
-    "hz": "Hz",
-    "db": "dB",
-    "c": "°C",
-}
-
-
-def unit_of(key: str) -> str:
-    """Return the unit a key carries as its suffix, empty where it carries none known."""
-    return "" if "_per_" in key else _UNIT_OF_SUFFIX.get(key.rsplit("_", 1)[-1], "")
-
-
-def nearest(name: str, known: Iterable[str], most: int = 3) -> list[str]:
-    """Known names most like the one given, best first; capitals do not count."""
-    wanted = name.lower()[:80]
-    by_lower = {candidate.lower(): candidate for candidate in known}
-    close = difflib.get_close_matches(wanted, by_lower, n=20, cutoff=0.5)
-
-    def likeness(candidate: str) -> tuple[float, int]:
-        ratio = difflib.SequenceMatcher(None, candidate, wanted).ratio()
-        same = itertools.takewhile(
-            lambda pair: pair[0] == pair[1], zip(candidate, wanted, strict=False)
-        )
-        return round(ratio, 2), len(list(same))
-
-    return [by_lower[candidate] for candidate in sorted(close, key=likeness, reverse=True)[:most]]
-
-
-def _read_number(value: object, info: ValidationInfo) -> object:
-    """Read a quantity by the unit its key carries."""
-    if isinstance(value, str | int | float):
-        return parse_quantity(value, unit_of(info.field_name or ""))
-    return value
-
-
-# Every number of a file: a number, or a text as builders write it.
-Number = Annotated[float, BeforeValidator(_read_number)]
-Positive = Annotated[Number, Field(gt=0)]
-NotNegative = Annotated[Number, Field(ge=0)]
-
-
-class Record(BaseModel):
-    """Frozen table of a file: unknown keys are refused, numbers are finite."""
-
-    model_config = ConfigDict(frozen=True, extra="forbid", allow_inf_nan=False)
 
 
 def _nan_is_open(value: object) -> object:
@@ -418,7 +358,7 @@ def _look_up(parts: Mapping[str, P], kind: str, name: str) -> P:
             return part
     close = nearest(name, parts)
     offer = f"nearest known: {', '.join(close)}" if close else f"known: {', '.join(parts)}"
-    raise DesignError(f"no {_WORDS[kind]} is called {_shown(name)}, {offer}")
+    raise DesignError(f"no {_WORDS[kind]} is called {shown(name)}, {offer}")
 
 
 def expand_part(kind: str, table: Mapping[str, Any], catalogue: Catalogue) -> dict[str, Any]:
@@ -434,7 +374,7 @@ def expand_part(kind: str, table: Mapping[str, Any], catalogue: Catalogue) -> di
     if origin is None:
         return {"name": f"own {_WORDS[kind]}", "source": "given in the design file", **changes}
     if not isinstance(origin, str):
-        raise DesignError(f"like is {_shown(origin)}, expected the name of a part")
+        raise DesignError(f"like is {shown(origin)}, expected the name of a part")
     base = catalogue.part(kind, origin).model_dump()
     if not changes:
         return base
@@ -460,40 +400,9 @@ def resolve_part(kind: str) -> Callable[[object, ValidationInfo], object]:
             raise ValueError(str(unknown)) from None
         if isinstance(value, Part):
             return value
-        raise ValueError(f"found {_shown(value)}, expected the name of a part or a table")
+        raise ValueError(f"found {shown(value)}, expected the name of a part or a table")
 
     return resolve
-
-
-def read_toml(path: Path) -> dict[str, Any]:
-    """Read a TOML file of ours.
-
-    Raises
-    ------
-    DesignError
-        If the file cannot be read, is larger than 1 MB, is not UTF-8 or not TOML.
-    """
-    if path.is_dir():
-        raise DesignError(f"{path} is a folder, expected a TOML file")
-    try:
-        with path.open("rb") as file:
-            raw = file.read(_LARGEST_FILE + 1)
-    except FileNotFoundError:
-        raise DesignError(f"{path} does not exist") from None
-    except (OSError, ValueError) as failure:
-        reason = getattr(failure, "strerror", None) or failure
-        raise DesignError(f"{path} cannot be read: {reason}") from None
-    if len(raw) > _LARGEST_FILE:
-        raise DesignError(f"{path} is larger than 1 MB, expected a text of a few kilobytes")
-    try:
-        return tomllib.loads(raw.decode("utf-8-sig"))
-    except UnicodeDecodeError as failure:
-        raise DesignError(f"{path} is not UTF-8 text (byte {failure.start})") from None
-    except RecursionError:
-        raise DesignError(f"{path} nests its tables too deeply") from None
-    except ValueError as failure:
-        reason = str(failure).partition(";")[0]
-        raise DesignError(f"{path} is not valid TOML: {reason}") from None
 
 
 def load_catalogue(extra: Path | None = None) -> Catalogue:
@@ -531,7 +440,7 @@ def _extended(catalogue: Catalogue, data: Mapping[str, Any], file: str) -> Catal
         if kind not in _MODELS:
             faults.append(f"{kind} is no kind of part, expected {', '.join(_MODELS)}")
         elif not isinstance(entries, Mapping):
-            faults.append(f'{kind} is {_shown(entries)}, expected tables [{kind}."NAME"]')
+            faults.append(f'{kind} is {shown(entries)}, expected tables [{kind}."NAME"]')
         else:
             for name in entries:
                 try:
@@ -556,14 +465,14 @@ def _written_out(
     while at in entries and at not in seen:
         entry = entries[at]
         if not isinstance(entry, Mapping):
-            raise DesignError(f"{kind}.{at} is {_shown(entry)}, expected a table")
+            raise DesignError(f"{kind}.{at} is {shown(entry)}, expected a table")
         layers.append(entry)
         seen.append(at)
         if "like" not in entry:
             break
         at = entry["like"]
         if not isinstance(at, str):
-            raise DesignError(f"{kind}.{seen[-1]}.like is {_shown(at)}, expected a part's name")
+            raise DesignError(f"{kind}.{seen[-1]}.like is {shown(at)}, expected a part's name")
     changes: dict[str, Any] = {}
     for layer in reversed(layers):
         changes.update({key: value for key, value in layer.items() if key != "like"})
@@ -575,114 +484,3 @@ def _written_out(
         raise DesignError(f"{kind}.{seen[-1]}.like: {fault}") from None
     base["source"] += f" Changed in a part file: {', '.join(changes) or 'the name'}."
     return {**base, **changes, "name": name}
-
-
-def problems(error: ValidationError, model: type[Record], within: str = "") -> list[str]:
-    """Turn a validation error into our own sentences, one a problem, each with its dotted key.
-
-    Parameters
-    ----------
-    error : ValidationError
-    model : type of Record
-        The model that was validated.
-    within : str
-        Dotted key of the model's own place in its file.
-    """
-    sentences: list[str] = []
-    missing: dict[str, tuple[int, list[str]]] = {}
-    for fault in error.errors(include_url=False):
-        path, table = _place(model, fault["loc"], within)
-        if fault["type"] == "missing":
-            stem, _, key = path.rpartition(".")
-            missing.setdefault(stem, (len(sentences), []))[1].append(key)
-            if len(missing[stem][1]) > 1:
-                continue
-        sentences += _sentence(fault, path, table)
-    for stem, (place, keys) in missing.items():
-        verb = "is missing" if len(keys) == 1 else "are missing"
-        listed = ", ".join(f"{stem}.{key}" if stem else key for key in keys)
-        sentences[place] = f"{listed} {verb}"
-    return sentences
-
-
-def _place(model: type[Record], loc: Sequence[int | str], within: str) -> tuple[str, type[Record]]:
-    """Dotted key of an error and the model of the table it stands in."""
-    path, table, records = within, model, [model]
-    for step in loc:
-        if isinstance(step, int):
-            path += f", part {step + 1}"
-        elif len(records) > 1:
-            # A choice between tables: this step is its tag, which is no key of the file.
-            records = [record for record in records if step in _kinds(record)]
-        else:
-            table = records[0] if records else table
-            path = f"{path}.{step}" if path else step
-            records = _records_of(table, step)
-    return path, table
-
-
-def _records_of(table: type[Record], key: str) -> list[type[Record]]:
-    known = table.model_fields.get(key)
-    return _records(known.annotation) if known else []
-
-
-def _kinds(record: type[Record]) -> tuple[Any, ...]:
-    known = record.model_fields.get("kind")
-    return get_args(known.annotation) if known else ()
-
-
-def _records(annotation: object) -> list[type[Record]]:
-    """Models found in an annotation such as ``tuple[Diode, ...] | None``."""
-    if isinstance(annotation, type) and issubclass(annotation, Record):
-        return [annotation]
-    return [record for inner in get_args(annotation) for record in _records(inner)]
-
-
-def _sentence(fault: Mapping[str, Any], path: str, table: type[Record]) -> list[str]:
-    kind, value, context = fault["type"], fault["input"], fault.get("ctx", {})
-    key = str(fault["loc"][-1]) if fault["loc"] else ""
-    if kind == "value_error":
-        return [f"{path}: {line}" if path else line for line in str(context["error"]).split("\n")]
-    if kind == "missing":
-        return [f"{path} is missing"]  # `problems` joins all of a table into one sentence
-    if kind == "extra_forbidden":
-        known = [name for name in table.model_fields if name != key]
-        close = nearest(key, known)
-        stem = path[: len(path) - len(key)]
-        offer = "nearest known: " if close else "known: "
-        return [f"{path} is no known key, {offer}{', '.join(stem + n for n in close or known)}"]
-    if kind == "union_tag_not_found":
-        choices = [tag for record in _records_of(table, key) for tag in _kinds(record)]
-        return [f"{path}.kind is missing, expected {', '.join(map(repr, choices))}"]
-    if kind == "union_tag_invalid":
-        return [f"{path}.kind is {_shown(context.get('tag'))}, expected {context['expected_tags']}"]
-    return [f"{path} is {_shown(value)}, expected {_expectation(kind, context, fault['msg'])}"]
-
-
-def _expectation(kind: str, context: Mapping[str, Any], fallback: str) -> str:
-    limits = {
-        "greater_than": "more than {gt:g}",
-        "greater_than_equal": "{ge:g} or more",
-        "less_than": "less than {lt:g}",
-        "less_than_equal": "{le:g} or less",
-        "literal_error": "{expected}",
-        "string_too_short": "a text that is not empty",
-        "string_too_long": "a text of {max_length} characters or fewer",
-    }
-    if kind in limits:
-        return limits[kind].format(**context)
-    if kind.startswith(("float", "int")):
-        return 'a number, or a text such as "4k7"'
-    if kind.startswith("string"):
-        return "a text"
-    if kind.startswith(("model", "dict")):
-        return "a table"
-    if kind.startswith(("tuple", "too_", "missing_")):
-        return f"a list ({fallback[0].lower()}{fallback[1:]})"
-    return fallback[0].lower() + fallback[1:]
-
-
-def _shown(value: object) -> str:
-    """Short form of a value found, for a sentence; its unit is in the key."""
-    text = f"{value:g}" if isinstance(value, float) else repr(value)
-    return text if len(text) <= 60 else text[:57] + "..."

@@ -393,8 +393,8 @@ def presets(name: str | None, as_json: bool) -> None:
 
     What is printed is a design file to start from.
     """
-    from tonesim.catalogue import nearest, read_toml
     from tonesim.designfile import list_presets, presets_folder
+    from tonesim.record import nearest, read_toml
 
     known = list_presets()
     if name is not None and name not in known:

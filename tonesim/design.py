@@ -18,15 +18,12 @@ from tonesim.catalogue import (
     CabinetShape,
     Diode,
     Loudspeaker,
-    NotNegative,
-    Number,
     OpAmp,
-    Positive,
-    Record,
     Transistor,
     load_catalogue,
     resolve_part,
 )
+from tonesim.record import NotNegative, Number, Positive, Record
 from tonesim.units import parse_quantity
 
 Side = Literal["upper", "lower"]

@@ -20,16 +20,13 @@ from tonesim.catalogue import (
     Loudspeaker,
     OpAmp,
     Part,
-    Record,
     Transistor,
     load_catalogue,
-    nearest,
-    problems,
-    read_toml,
 )
 from tonesim.design import Design
 from tonesim.errors import DesignError
 from tonesim.limits import faults
+from tonesim.record import Record, nearest, problems, read_toml
 
 _HERE = Path(__file__).parent
 # Besides every key called part: where a name may be opened to change a value inside it.
