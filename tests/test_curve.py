@@ -333,3 +333,12 @@ def test_operating_points_cannot_be_changed():
     _, idle = _preset("full-chain")
     with pytest.raises(dataclasses.FrozenInstanceError):
         idle.output_v = 1.0
+
+
+def test_an_op_amp_lifted_far_beyond_the_rails_is_still_solved():
+    own = {"driver.positive_v": 9.0, "driver.negative_v": -9.0}
+    up, low = _clips({**own, "bias.upper": ["1N4148"] * 2, "bias.lower": ["1N4148"] * 2})
+    assert up.level_v == pytest.approx(-low.level_v, rel=1e-9)
+    assert up.cause == low.cause == "driver swing"
+    assert up.gains_v == pytest.approx(low.gains_v, abs=1e-9)
+    assert max(up.residual_a, low.residual_a) < 1e-9

@@ -72,7 +72,8 @@ class OperatingPoint:
 class ClipLevel:
     """Static clip level of one half, and what would raise it.
 
-    `gains_v` holds, for each limit lifted alone, how much further the output would go.
+    `gains_v` holds, for each limit lifted alone, how much further the output would go;
+    `residual_a` is the worst of all these solutions.
     """
 
     level_v: float
@@ -357,7 +358,7 @@ def _clip(circuit: Circuit, idle: OperatingPoint, sign: float) -> ClipLevel:
         cause=cause,
         gains_v=gains,
         load_current_a=reach * g,
-        residual_a=max(point.imbalance, point.residual),
+        residual_a=max(max(s.imbalance, s.residual) for s in (point, *lifted.values())),
     )
 
 

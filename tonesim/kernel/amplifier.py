@@ -104,7 +104,7 @@ def drive_imbalance(v_d, v_o, v_x, v_p, v_n, p):
 @kernel
 def drive_node(v_o, v_x, v_p, v_n, p):
     """v_d at which the drive node is balanced, for given v_o and v_x."""
-    x1, x2 = -v_n - _REACH, v_p + _REACH
+    x1, x2 = min(-v_n - _REACH, v_x), max(v_p + _REACH, v_x)
     f1 = drive_imbalance(x1, v_o, v_x, v_p, v_n, p)
     f2 = drive_imbalance(x2, v_o, v_x, v_p, v_n, p)
     x3, f3, t = x2, f2, 0.5

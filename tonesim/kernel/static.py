@@ -51,7 +51,7 @@ def drive_imbalance(v_d, v_o, v_x, v_p, v_n, extra, upper, lower, q, x):
 @kernel
 def drive_at_rest(v_o, v_x, v_p, v_n, extra, upper, lower, q, x):
     """v_d at which the drive node is balanced."""
-    x1, x2 = -v_n - _REACH, v_p + _REACH
+    x1, x2 = min(-v_n - _REACH, v_x), max(v_p + _REACH, v_x)
     f1 = drive_imbalance(x1, v_o, v_x, v_p, v_n, extra, upper, lower, q, x)
     f2 = drive_imbalance(x2, v_o, v_x, v_p, v_n, extra, upper, lower, q, x)
     x3, f3, t = x2, f2, 0.5
