@@ -22,7 +22,7 @@ from tonesim.cli import INTERRUPTED, commands
 from tonesim.designfile import build_design, list_presets, load_design
 
 RATE = 48_000
-ROOT = Path(__file__).parent.parent
+ROOT = Path(tonesim.__file__).parent.parent  # of the package under test, installed or not
 ALL = ("render", "check", "parts", "presets", "demo")
 
 
@@ -64,7 +64,9 @@ def take(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> Path:
 
 
 def test_the_version_is_the_package_s(take):
-    project = tomllib.loads((ROOT / "pyproject.toml").read_text(encoding="utf-8"))["project"]
+    project = tomllib.loads(
+        (Path(__file__).parent.parent / "pyproject.toml").read_text(encoding="utf-8")
+    )["project"]
     assert project["version"] == tonesim.__version__
     assert run("--version").stdout == f"tonesim {tonesim.__version__}\n"
 
