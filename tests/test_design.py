@@ -88,7 +88,7 @@ def test_values_left_out_take_their_stated_defaults(bench: Path) -> None:
     design = load_design(bench)
     supply = design.supply
     assert isinstance(supply, BenchSupply)
-    assert (supply.negative_v, supply.negative, supply.source_ohm) == (-15.0, -15.0, 0.0)
+    assert (supply.negative_v, supply.open_negative_v, supply.source_ohm) == (-15.0, -15.0, 0.0)
     assert (supply.decoupling_f, supply.current_limit_a) == (100e-6, None)
     assert (design.input.full_scale_v, design.input.gain_db) == (4.4, 0.0)
     assert (design.driver.offset_v, design.cabinet, design.notes) == (0.0, None, "")

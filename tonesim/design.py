@@ -248,59 +248,39 @@ def _mirrored(data: object) -> object:
     return {**data, "negative_v": mirror}
 
 
-class BenchSupply(Record):
+class _StatedRails(Record):
+    """Supply whose rails are given as such; a negative rail left out mirrors the positive."""
+
+    positive_v: Rail
+    negative_v: NegativeRail
+    decoupling_f: Positive = 100e-6
+
+    _fill = model_validator(mode="before")(staticmethod(_mirrored))
+
+    @property
+    def open_positive_v(self) -> float:
+        """Positive rail without load, volts."""
+        return self.positive_v
+
+    @property
+    def open_negative_v(self) -> float:
+        """Negative rail without load, volts, with its sign."""
+        return self.negative_v
+
+
+class BenchSupply(_StatedRails):
     """Laboratory supply; ideal where `source_ohm` is zero."""
 
     kind: Literal["bench"]
-    positive_v: Rail
-    negative_v: NegativeRail
     source_ohm: NotNegative = 0.0
     current_limit_a: Positive | None = None
-    decoupling_f: Positive = 100e-6
-
-    _fill = model_validator(mode="before")(staticmethod(_mirrored))
-
-    @property
-    def open_positive_v(self) -> float:
-        """Positive rail without load, volts."""
-        return self.positive_v
-
-    @property
-    def negative(self) -> float:
-        """Negative rail without load, volts, with its sign."""
-        return self.negative_v
-
-    @property
-    def open_negative_v(self) -> float:
-        """Negative rail without load, volts, with its sign."""
-        return self.negative_v
 
 
-class BatterySupply(Record):
+class BatterySupply(_StatedRails):
     """Two batteries, one a rail, each with the internal resistance."""
 
     kind: Literal["battery"]
-    positive_v: Rail
-    negative_v: NegativeRail
     internal_ohm: Positive
-    decoupling_f: Positive = 100e-6
-
-    _fill = model_validator(mode="before")(staticmethod(_mirrored))
-
-    @property
-    def open_positive_v(self) -> float:
-        """Positive rail without load, volts."""
-        return self.positive_v
-
-    @property
-    def negative(self) -> float:
-        """Negative rail without load, volts, with its sign."""
-        return self.negative_v
-
-    @property
-    def open_negative_v(self) -> float:
-        """Negative rail without load, volts, with its sign."""
-        return self.negative_v
 
 
 class TransformerSupply(Record):
