@@ -6,7 +6,7 @@ import json
 import pytest
 from conftest import make_design
 
-from tonesim import check as check_module
+from tonesim import stage as stage_module
 from tonesim.catalogue import diode_drop
 from tonesim.check import HalfAtRest, check_design
 from tonesim.designfile import list_presets, load_design
@@ -85,9 +85,9 @@ def test_sine_power_is_that_of_the_half_that_clips_first():
 
 
 def test_a_stage_without_idle_point_is_refused(monkeypatch):
-    idle = check_module.idle_point
+    idle = stage_module.idle_point
     monkeypatch.setattr(
-        check_module, "idle_point", lambda c: dataclasses.replace(idle(c), converged=False)
+        stage_module, "idle_point", lambda c: dataclasses.replace(idle(c), converged=False)
     )
     with pytest.raises(SolverError, match="'bench piece': the stage finds no idle point"):
         check_design(make_design())

@@ -369,7 +369,8 @@ def test_an_impulse_response_file_is_the_cabinet(tmp_path):
     # What rings before the first frame is lost without the delay, so the comparison begins at it.
     np.testing.assert_allclose(volts(heard)[2:, 0], 0.25 * volts(plain)[:-2, 0], atol=1e-12)
     # Its bytes, not its path, make the key.
-    moved = record(tmp_path / "moved.wav", np.array([0.0, 0.0, 0.25]), subtype="DOUBLE")
+    moved = tmp_path / "moved.wav"
+    moved.write_bytes(response.read_bytes())
     assert design_key(replace(design, cabinet={"file": str(moved)})) == heard.design_key_sha256
 
 
@@ -424,11 +425,11 @@ def test_a_disk_without_room_for_the_first_pass_is_named(tmp_path, monkeypatch):
 def test_a_stage_that_cannot_idle_writes_nothing(tmp_path, monkeypatch):
     import dataclasses
 
-    from tonesim import processor
+    from tonesim import stage
 
-    idle = processor.idle_point
+    idle = stage.idle_point
     monkeypatch.setattr(
-        processor, "idle_point", lambda c: dataclasses.replace(idle(c), converged=False)
+        stage, "idle_point", lambda c: dataclasses.replace(idle(c), converged=False)
     )
     source = record(tmp_path / "in.wav", plucks(500))
     with pytest.raises(SolverError, match="finds no idle point"):

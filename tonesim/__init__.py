@@ -13,6 +13,7 @@ The modules, in the order in which one may import another (never the other way r
 - `tonesim.designfile`: design files and presets to a checked `Design`, and back
 - `tonesim.circuit`: a design to bare numbers
 - `tonesim.curve`: transfer surfaces, idle point, clip levels
+- `tonesim.stage`: a design made ready to run
 - `tonesim.check`: a stage at rest in the figures of the bench
 - `tonesim.oversample`: up to the internal rate and down again
 - `tonesim.processor`: the stage as a processor of blocks, `Amplifier`

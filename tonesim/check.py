@@ -4,11 +4,11 @@ from dataclasses import asdict, dataclass
 from typing import Any
 
 from tonesim.circuit import Circuit, lower
-from tonesim.curve import ClipLevel, OperatingPoint, chain_voltage, clip_levels, idle_point
+from tonesim.curve import ClipLevel, OperatingPoint, chain_voltage, clip_levels
 from tonesim.design import Design
 from tonesim.designfile import design_key
-from tonesim.errors import SolverError
 from tonesim.limits import cautions
+from tonesim.stage import find_idle
 
 
 @dataclass(frozen=True)
@@ -67,12 +67,7 @@ def check_design(design: Design) -> StageCheck:
         If the stage finds no idle point.
     """
     circuit = lower(design)
-    idle = idle_point(circuit)
-    if not idle.converged:
-        raise SolverError(
-            f"design {design.title!r}: the stage finds no idle point "
-            f"(imbalance {idle.residual_a:.3g} A, expected below 1e-6 A)"
-        )
+    idle = find_idle(circuit, design.title)
     above, below = clip_levels(circuit, idle)
     upper = _half(circuit, idle, above, upper=True)
     lower_ = _half(circuit, idle, below, upper=False)

@@ -291,6 +291,14 @@ def lower_load(design: Design) -> Load:
     return net._replace(d=d, zobel_ohm=load.zobel_ohm or 0.0, zobel_f=load.zobel_f or 0.0)
 
 
+def bench_load(design: Design) -> Load:
+    """Resistor of the rated impedance in place of a loudspeaker; the Zobel network stays."""
+    network = 1.0 / (design.driver.feedback_ohm + design.driver.ground_leg_ohm)
+    load = lower_load(design)
+    nothing = np.zeros((0, 0)), np.zeros(0), np.zeros(0)
+    return Load(*nothing, 1.0 / design.load.bench_ohm + network, load.zobel_ohm, load.zobel_f)
+
+
 def load_impedance(load: Load, frequency_hz: npt.ArrayLike) -> npt.NDArray[np.complex128]:
     """Complex impedance of a load, in ohm.
 

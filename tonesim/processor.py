@@ -5,19 +5,19 @@ allocated in `prepare`; `process` allocates nothing that grows, never raises on 
 gives the same bits however the signal is cut.
 """
 
-import math
 from dataclasses import dataclass
 
 import numpy as np
 
-from tonesim.circuit import Circuit, discretise_load, lower
-from tonesim.curve import OperatingPoint, Surfaces, build_surfaces, idle_point
+from tonesim.circuit import Circuit, lower
+from tonesim.curve import OperatingPoint, Surfaces
 from tonesim.design import Design
-from tonesim.errors import SolverError, UsageError
+from tonesim.errors import UsageError
 from tonesim.kernel import amplifier as loop
-from tonesim.kernel.amplifier import AmplifierParams, advance
+from tonesim.kernel.amplifier import advance
 from tonesim.oversample import Oversampler, oversampling_factor
 from tonesim.signals import Signal
+from tonesim.stage import build_stage, state_at_rest, step_params
 
 TOLERANCE_V = 1e-3  # a Newton step below this is the last: what is left is its square
 _WARM_UP_S = 0.1  # silence run in `prepare`, so that the stage starts at rest
@@ -87,55 +87,19 @@ class Amplifier:
         """
         self.factor = oversampling_factor(sample_rate, multiply=self.multiply)
         dt = 1.0 / (sample_rate * self.factor)
-        surfaces = build_surfaces(self.circuit)
-        idle = idle_point(self.circuit)
-        if not idle.converged:
-            raise SolverError(
-                f"design {self.design.title!r}: the stage finds no idle point "
-                f"(imbalance {idle.residual_a:.3g} A, expected below 1e-6 A)"
-            )
-        self.surfaces, self.idle = surfaces, idle
-        angle = 2.0 * math.pi * self.circuit.mains_hz * dt
-        self._params = AmplifierParams(
-            upper=surfaces.upper,
-            lower=surfaces.lower,
-            grid=surfaces.grid,
-            driver=self.circuit.driver,
-            load=discretise_load(self.circuit.load, dt),
-            rail_positive=self.circuit.rail_positive,
-            rail_negative=self.circuit.rail_negative,
-            mains_sin=math.sin(angle),
-            mains_cos=math.cos(angle),
-            dt=dt,
-            tolerance=self.tolerance_v,
-        )
+        stage = build_stage(self.design)
+        self.surfaces, self.idle = stage.surfaces, stage.idle
+        self._params = step_params(stage, dt, self.tolerance_v)
         self._oversampler = Oversampler(self.factor, block_size)
         self._block = block_size
         self._fast_in = np.zeros(block_size * self.factor)
         self._fast_out = np.zeros(block_size * self.factor)
-        self._state = self._at_rest(idle)
+        self._state = state_at_rest(stage)
         self._evidence = np.zeros(loop.EVIDENCE_SIZE)
         self._warm_up(dt)
         self._rest = self._state.copy()
         self._rest_v = float(self._rest[loop.O1])
         self.reset()
-
-    def _at_rest(self, idle: OperatingPoint) -> Signal:
-        """State array of the static idle point."""
-        load = self.circuit.load
-        state = np.zeros(loop.LOAD + load.b.size)
-        state[loop.O1 : loop.O3 + 1] = idle.output_v
-        state[loop.D1 : loop.D3 + 1] = idle.drive_v
-        state[loop.X1 : loop.X3 + 1] = idle.driver_v
-        state[loop.CAP_P] = idle.rail_positive.capacitor_v
-        state[loop.CAP_N] = idle.rail_negative.capacitor_v
-        state[loop.RAIL_P] = idle.rail_positive.mean_v
-        state[loop.RAIL_N] = idle.rail_negative.mean_v
-        state[loop.MAINS_COS] = 1.0
-        state[loop.ZOBEL_V] = idle.output_v
-        if load.b.size:
-            state[loop.LOAD :] = -np.linalg.solve(load.a, load.b) * idle.output_v
-        return state
 
     def _warm_up(self, dt: float) -> None:
         """Run silence: the last difference between static and moving solution dies here."""
