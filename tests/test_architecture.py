@@ -25,10 +25,12 @@ RANKS: dict[str, int] = {
     "kernel.amplifier": 4,
     "kernel.static": 4,
     "signals": 1,
+    "harmonics": 2,
     "record": 4,
     "catalogue": 5,
     "design": 6,
     "limits": 7,
+    "thermal": 7,
     "designfile": 8,
     "circuit": 8,
     "curve": 9,
@@ -57,7 +59,7 @@ DOORS: dict[str, set[str]] = {
     "matplotlib": {"plot"},
     "rich": {"show"},
     "click": {"cli", "__main__"},
-    "scipy": {"curve", "oversample", "level", "cabinet", "bench", "masking"},
+    "scipy": {"curve", "oversample", "level", "cabinet", "bench", "masking", "thermal"},
 }
 BANNED_NAMES = {"util", "utils", "helpers", "common", "misc", "base"}
 

@@ -5,11 +5,13 @@ The modules, in the order in which one may import another (never the other way r
 - `tonesim.errors`: what a user can mend, each kind with its exit code
 - `tonesim.units`: quantities as builders write them, decibels, preferred values
 - `tonesim.signals`: what a signal is, and test signals
+- `tonesim.harmonics`: distortion, hum and residue of coherent records
 - `tonesim.kernel`: the compiled numerical core: devices, halves, driver, rails, load, filters
 - `tonesim.record`: tables of a file as frozen models, errors as sentences
 - `tonesim.catalogue`: parts, their laws and the part files
 - `tonesim.design`: what a design is: sections, keys, units
 - `tonesim.limits`: what its parts can bear
+- `tonesim.thermal`: junction temperatures, heat sinks, thermal runaway
 - `tonesim.designfile`: design files and presets to a checked `Design`, and back
 - `tonesim.circuit`: a design to bare numbers
 - `tonesim.curve`: transfer surfaces, idle point, clip levels
