@@ -392,6 +392,21 @@ def test_hum_is_no_distortion():
     assert (untold.hum_v, untold.thd_f) == (0.0, h.thd_f)
 
 
+def test_sidebands_of_a_low_tone_fold_at_zero():
+    # 82 Hz with ripple of 100 Hz: its lower sidebands lie at 18 and 118 Hz.
+    y = tones((1.0, 82), (0.03, 18), (0.04, 118), frames=48_000)
+    h = analyse_harmonics(y, 82, RATE, bandwidth_hz=20e3, mains_hz=100.0)
+    assert h.hum_v == pytest.approx(0.05 / math.sqrt(2.0), rel=1e-12)
+    assert h.residue_v < 1e-13
+
+
+@given(st.integers(1, 300), st.integers(2, 6), st.sampled_from([44_100.0, 48_000.0, 384_000.0]))
+def test_a_band_named_by_its_last_harmonic_holds_it(cycles, order, rate):
+    y = tones((1.0, cycles), frames=4001)
+    h = analyse_harmonics(y, cycles, rate, bandwidth_hz=order * cycles * (rate / 4001))
+    assert h.highest_order == order
+
+
 def test_noise_goes_to_the_residue_by_its_bandwidth(rng):
     noise = 0.01 * rng.standard_normal(FRAMES)
     y = tones((1.0, 1361)) + noise

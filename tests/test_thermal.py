@@ -9,7 +9,7 @@ from dataclasses import replace
 import numpy as np
 import pytest
 from conftest import make_design
-from hypothesis import assume, given
+from hypothesis import assume, example, given
 from hypothesis import strategies as st
 from scipy.special import lambertw, wrightomega
 
@@ -281,6 +281,7 @@ def test_a_straight_line_of_heat_settles_by_hand(at_rest, per_kelvin, theta):
         assert e.residual_k > 0.0
 
 
+@example(0.998 * 20.0 / (10.0 * math.e), 20.0, 10.0)  # two solutions 2.5 K apart
 @given(st.floats(0.01, 10.0), st.floats(10.0, 40.0), st.floats(0.5, 40.0))
 def test_exponential_heat_settles_by_lamberts_function_or_runs_away(at_rest, fold, theta):
     # T - Ta = theta P0 exp((T - Ta)/T0) has solutions up to theta P0 / T0 = 1/e, the lower one at

@@ -277,8 +277,7 @@ def difference_distortion(
     """Difference products of two equal tones close together, f1 below f2.
 
     d2 = U(f2-f1) / R, d3 = [U(2 f1-f2) + U(2 f2-f1)] / R with R = 2 U(f2); IEC 60268-3,
-    difference-frequency distortion (from memory; the reference as quoted in the manual of the
-    Lindos LA100 audio analyser, 2.16).
+    difference-frequency distortion (from memory); usual tones 19 and 20 kHz.
 
     Parameters
     ----------
