@@ -94,7 +94,7 @@ class Amplifier:
         self.surfaces, self.idle = stage.surfaces, stage.idle
         self._params = step_params(stage, dt, self.tolerance_v)
         front, gain = self.circuit.front, self.circuit.gain
-        self._front = discretise_front(front, dt, gain) if front else None
+        self._front = None if front is None else discretise_front(front, dt, gain)
         self._front_state = np.zeros(front_loop.SIZE)
         self._oversampler = Oversampler(self.factor, block_size)
         self._block = block_size
