@@ -16,7 +16,10 @@ from tonesim.designfile import build_design
 ROOT = Path(__file__).parent.parent
 README = (ROOT / "README.md").read_text()
 COMMANDS = sorted(cli.commands.commands)
-WITH_DOCTESTS = ("units", "catalogue", "design", "circuit", "front", "signals", "oversample", "level")
+WITH_DOCTESTS = (
+    *("units", "catalogue", "design", "circuit", "front"),
+    *("signals", "oversample", "level"),
+)
 
 
 def blocks(language: str) -> list[str]:

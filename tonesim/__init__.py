@@ -5,7 +5,7 @@ The modules, in the order in which one may import another (never the other way r
 - `tonesim.errors`: what a user can mend, each kind with its exit code
 - `tonesim.units`: quantities as builders write them, decibels, preferred values
 - `tonesim.signals`: what a signal is, and test signals
-- `tonesim.kernel`: the compiled numerical core: devices, halves, driver, rails, load, front, filters
+- `tonesim.kernel`: compiled numerical core: devices, halves, driver, rails, load, filters, front
 - `tonesim.record`: tables of a file as frozen models, errors as sentences
 - `tonesim.catalogue`: parts, their laws and the part files
 - `tonesim.design`: what a design is: sections, keys, units
