@@ -15,6 +15,8 @@ from tonesim.cabinet import Cabinet, shape_response
 from tonesim.circuit import lower
 from tonesim.curve import build_surface, grid_for
 from tonesim.designfile import demo_audio_folder, list_presets, load_design
+from tonesim.front import discretise_front
+from tonesim.kernel.front import SIZE, advance_front
 from tonesim.oversample import Oversampler
 from tonesim.processor import Amplifier
 from tonesim.wav import open_recording
@@ -89,6 +91,19 @@ def surface_row(name: str) -> str:
     return f"{name:<28}{1e3 * took:>8.0f} ms{table.nbytes / 1e6:>8.1f} MB"
 
 
+def front_row(name: str, x: np.ndarray) -> str:
+    design = load_design(name)
+    front = lower(design).front
+    assert front is not None
+    factor = 8
+    params, state = discretise_front(front, 1.0 / (RATE * factor)), np.zeros(SIZE)
+    fast = np.repeat(x * design.input.full_scale_v, factor)
+    out = np.empty_like(fast)
+    advance_front(fast[:BLOCK], out[:BLOCK], state, params)
+    took = seconds_for(lambda: advance_front(fast, out, state, params))
+    return f"{name:<28}{1e9 * took / fast.size:>8.1f} ns/step"
+
+
 def against_integrator(name: str) -> str:
     """Real-time factor of the stage divided by that of IDA at comparable accuracy."""
     from conftest import make_design
@@ -120,6 +135,8 @@ def main() -> None:
     print(f"\n{'surface of one half':<28}{'build':>11}{'size':>11}")
     for name in ("no-chain", "full-chain", "vbe-multiplier", "single-pair-current-limit"):
         print(surface_row(name), flush=True)
+    print(f"\n{'front end alone':<28}")
+    print(front_row("tone-controls", x), flush=True)
     print(f"\n{'1 kHz sine, loudspeaker':<28}{'x real':>8}{'IDA':>10}{'ratio':>10}")
     print(against_integrator("partial chain"))
 

@@ -16,7 +16,10 @@ from tonesim.designfile import build_design
 ROOT = Path(__file__).parent.parent
 README = (ROOT / "README.md").read_text()
 COMMANDS = sorted(cli.commands.commands)
-WITH_DOCTESTS = ("units", "catalogue", "design", "circuit", "signals", "oversample", "level")
+WITH_DOCTESTS = (
+    *("units", "catalogue", "design", "circuit", "front"),
+    *("signals", "oversample", "level"),
+)
 
 
 def blocks(language: str) -> list[str]:
@@ -39,7 +42,8 @@ def test_readme_lists_every_key_of_a_design():
     schema = build_design(tomllib.loads(blocks("toml")[0])).model_json_schema()
     table = README[README.index("## Design files") :]
     for name, section in schema["$defs"].items():
-        if name in {"Input", "Driver", "Bias", "Output", "Load", "Cabinet"} or "Supply" in name:
+        sections = {"Input", "Front", "Tone", "Driver", "Bias", "Output", "Load", "Cabinet"}
+        if name in sections or "Supply" in name:
             for key in section["properties"]:
                 assert f"`{key}`" in table or f"{key} =" in table, f"{name}.{key}"
 

@@ -6,7 +6,7 @@ The modules, in the order in which one may import another (never the other way r
 - `tonesim.units`: quantities as builders write them, decibels, preferred values
 - `tonesim.signals`: what a signal is, and test signals
 - `tonesim.harmonics`: distortion, hum and residue of coherent records
-- `tonesim.kernel`: the compiled numerical core: devices, halves, driver, rails, load, filters
+- `tonesim.kernel`: compiled numerical core: devices, halves, driver, rails, load, filters, front
 - `tonesim.record`: tables of a file as frozen models, errors as sentences
 - `tonesim.catalogue`: parts, their laws and the part files
 - `tonesim.design`: what a design is: sections, keys, units
@@ -15,6 +15,7 @@ The modules, in the order in which one may import another (never the other way r
 - `tonesim.designfile`: design files and presets to a checked `Design`, and back
 - `tonesim.circuit`: a design to bare numbers
 - `tonesim.curve`: transfer surfaces, idle point, clip levels
+- `tonesim.front`: gain stage, tone network and volume in numbers
 - `tonesim.stage`: a design made ready to run
 - `tonesim.check`: a stage at rest in the figures of the bench
 - `tonesim.oversample`: up to the internal rate and down again

@@ -43,6 +43,31 @@ class Load(NamedTuple):
     zobel_f: float = 0.0  # 0: no network
 
 
+class Tone(NamedTuple):
+    """Tone network (see front.py); positions of the pots from 0, full cut, to 1, full boost."""
+
+    bass: float
+    treble: float
+    bass_end_ohm: float
+    bass_pot_ohm: float
+    bass_wiper_ohm: float
+    bass_f: float
+    treble_end_ohm: float
+    treble_pot_ohm: float
+    treble_f: float
+
+
+class Front(NamedTuple):
+    """Front end: gain stage, tone network, volume."""
+
+    gain: float
+    clip_positive_v: float
+    clip_negative_v: float
+    tone: Tone | None  # None: no network
+    volume: float  # rotation, 0 to 1
+    volume_middle: float  # share at half rotation
+
+
 class Circuit(NamedTuple):
     """A design in bare numbers, for any sample rate."""
 
@@ -54,7 +79,8 @@ class Circuit(NamedTuple):
     mains_hz: float
     load: Load
     bench_ohm: float  # resistor that stands for the load on the bench, ohm
-    gain: float  # volts at the op-amp's input per volt at the jack
+    gain: float  # volts at the op-amp's input per volt at the jack, or behind the front end
+    front: Front | None  # None: straight from the jack
 
 
 def _bipolar(
@@ -356,6 +382,22 @@ def discretise_load(load: Load, dt: float) -> LoadParams:
     )
 
 
+def lower_front(design: Design) -> Front | None:
+    """Front end, None where the design has none."""
+    front = design.front
+    if front is None:
+        return None
+    tone = front.tone
+    return Front(
+        gain=10.0 ** (front.gain_db / 20.0),
+        clip_positive_v=front.clip_positive_v,
+        clip_negative_v=front.lowest_v,
+        tone=Tone(*(float(getattr(tone, key)) for key in Tone._fields)) if tone else None,
+        volume=front.volume,
+        volume_middle=front.volume_middle,
+    )
+
+
 def lower(design: Design) -> Circuit:
     """Lower a design to bare numbers.
 
@@ -378,4 +420,5 @@ def lower(design: Design) -> Circuit:
         load=lower_load(design),
         bench_ohm=design.load.bench_ohm,
         gain=10.0 ** (design.input.gain_db / 20.0),
+        front=lower_front(design),
     )

@@ -1,4 +1,4 @@
-"""Designs: one output stage with its input, supply, load and cabinet, every value resolved.
+"""Designs: an output stage, its input, front end, supply, load and cabinet, every value resolved.
 
 Keys carry SI units as suffixes; numbers may be written by IEC 60062 ("4k7", "0R22", "2200u").
 A part is a name of the catalogue or a table of its own; after loading it is the part's model,
@@ -52,6 +52,9 @@ Rail = Annotated[Number, Field(gt=0, le=200)]
 NegativeRail = Annotated[Number, Field(lt=0, ge=-200)]
 Factor = Annotated[Number, Field(ge=0.2, le=5)]
 Shift = Annotated[Number, Field(ge=-0.1, le=0.1)]
+Position = Annotated[Number, Field(ge=0, le=1)]  # of a pot
+NetworkResistor = Annotated[Number, Field(ge=10, le=1e7)]
+NetworkCapacitor = Annotated[Number, Field(ge=1e-12, le=1e-4)]
 
 
 class Input(Record):
@@ -62,6 +65,51 @@ class Input(Record):
 
     full_scale_v: Annotated[Number, Field(gt=0, le=100)] = 4.4
     gain_db: Annotated[Number, Field(ge=-80, le=80)] = 0.0
+
+
+class Tone(Record):
+    """Bass and treble in a negative-feedback network (Baxandall 1952; drawn in `front`).
+
+    Both pots have linear tracks: 0 is full cut, 0.5 flat, 1 full boost. Each has an end resistor
+    at either side. A capacitor `bass_f` bridges each half of the bass pot, whose wiper reaches
+    the summing point through `bass_wiper_ohm`; the treble pot's reaches it through `treble_f`.
+    """
+
+    bass: Position = 0.5
+    treble: Position = 0.5
+    bass_end_ohm: NetworkResistor = 22e3
+    bass_pot_ohm: NetworkResistor = 100e3
+    bass_wiper_ohm: NetworkResistor = 22e3
+    bass_f: NetworkCapacitor = 22e-9
+    treble_end_ohm: NetworkResistor = 15e3
+    treble_pot_ohm: NetworkResistor = 220e3
+    treble_f: NetworkCapacitor = 2.2e-9
+
+
+class Front(Record):
+    """Gain stage that clips, tone network, buffer and volume pot, between jack and `input`'s gain.
+
+    Clip levels are those at the gain stage's output; a negative one left out mirrors the
+    positive. `volume_mid_percent` is what a logarithmic track has at half rotation.
+    """
+
+    gain_db: Annotated[Number, Field(ge=-40, le=100)] = 0.0
+    clip_positive_v: Rail = 13.5
+    clip_negative_v: NegativeRail | None = None
+    tone: Tone | None = None
+    volume: Position = 1.0
+    volume_taper: Literal["linear", "logarithmic"] = "logarithmic"
+    volume_mid_percent: Annotated[Number, Field(ge=1, le=50)] = 15.0
+
+    @property
+    def lowest_v(self) -> float:
+        """Clip level of the negative side, volts, with its sign."""
+        return -self.clip_positive_v if self.clip_negative_v is None else self.clip_negative_v
+
+    @property
+    def volume_middle(self) -> float:
+        """Share of the signal at half rotation of the volume pot."""
+        return 0.5 if self.volume_taper == "linear" else self.volume_mid_percent / 100.0
 
 
 class Driver(Record):
@@ -386,11 +434,12 @@ class Cabinet(Record):
 
 
 class Design(Record):
-    """One output stage with its input, supply, load and cabinet, every value resolved."""
+    """An output stage, its input, front end, supply, load and cabinet, every value resolved."""
 
     title: Annotated[str, Field(min_length=1, max_length=200)]
     notes: Annotated[str, Field(max_length=20000)] = ""
     input: Input = Input()
+    front: Front | None = None
     driver: Driver
     bias: Bias = Bias()
     output: Output

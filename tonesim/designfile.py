@@ -253,6 +253,8 @@ def design_key(design: Design) -> str:
         If the impulse response cannot be read.
     """
     data = design.model_dump(mode="json", exclude={"title", "notes"})
+    if design.front is None:
+        del data["front"]  # as if there were no such section: older keys stay
     if design.cabinet and design.cabinet.file:
         try:
             content = Path(design.cabinet.file).read_bytes()

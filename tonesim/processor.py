@@ -13,8 +13,11 @@ from tonesim.circuit import Circuit, lower
 from tonesim.curve import OperatingPoint, Surfaces
 from tonesim.design import Design
 from tonesim.errors import UsageError
+from tonesim.front import discretise_front
 from tonesim.kernel import amplifier as loop
+from tonesim.kernel import front as front_loop
 from tonesim.kernel.amplifier import advance
+from tonesim.kernel.front import advance_front
 from tonesim.oversample import Oversampler, oversampling_factor
 from tonesim.signals import Signal
 from tonesim.stage import build_stage, state_at_rest, step_params
@@ -90,6 +93,9 @@ class Amplifier:
         stage = build_stage(self.design)
         self.surfaces, self.idle = stage.surfaces, stage.idle
         self._params = step_params(stage, dt, self.tolerance_v)
+        front, gain = self.circuit.front, self.circuit.gain
+        self._front = None if front is None else discretise_front(front, dt, gain)
+        self._front_state = np.zeros(front_loop.SIZE)
         self._oversampler = Oversampler(self.factor, block_size)
         self._block = block_size
         self._fast_in = np.zeros(block_size * self.factor)
@@ -104,6 +110,8 @@ class Amplifier:
     def _warm_up(self, dt: float) -> None:
         """Run silence: the last difference between static and moving solution dies here."""
         silence = np.zeros(round(_WARM_UP_S / dt))
+        if self._front is not None:
+            advance_front(silence, silence, self._front_state, self._front)
         advance(silence, np.empty_like(silence), self._state, self._evidence, self._params)
 
     def process(self, block: Signal) -> Signal:
@@ -126,9 +134,13 @@ class Amplifier:
             raise UsageError(_PREPARE_FIRST)
         out = np.empty(block.shape[0])
         for start in range(0, block.shape[0], self._block):
-            part = block[start : start + self._block] * self.circuit.gain
+            part = block[start : start + self._block]
             n = part.shape[0] * self.factor
-            self._oversampler.up(part, self._fast_in[:n])
+            if self._front is None:
+                self._oversampler.up(part * self.circuit.gain, self._fast_in[:n])
+            else:
+                self._oversampler.up(part, self._fast_in[:n])
+                advance_front(self._fast_in[:n], self._fast_in[:n], self._front_state, self._front)
             advance(
                 self._fast_in[:n],
                 self._fast_out[:n],
@@ -147,6 +159,7 @@ class Amplifier:
         if self._block == 0:
             raise UsageError(_PREPARE_FIRST)
         self._oversampler.reset()
+        self._front_state[:] = 0.0
         self._state[:] = self._rest
         self._evidence[:] = 0.0
         self._evidence[loop.PEAK_P] = self._evidence[loop.PEAK_N] = self._state[loop.O1]
