@@ -31,9 +31,13 @@ RANKS: dict[str, int] = {
     "limits": 7,
     "designfile": 8,
     "circuit": 8,
+    "loop": 8,
+    "margins": 8,
     "curve": 9,
     "oversample": 9,
+    "smallsignal": 9,
     "stage": 10,
+    "stability": 10,
     "check": 11,
     "processor": 11,
     "wav": 11,
@@ -57,7 +61,7 @@ DOORS: dict[str, set[str]] = {
     "matplotlib": {"plot"},
     "rich": {"show"},
     "click": {"cli", "__main__"},
-    "scipy": {"curve", "oversample", "level", "cabinet", "bench", "masking"},
+    "scipy": {"curve", "oversample", "level", "cabinet", "bench", "masking", "margins"},
 }
 BANNED_NAMES = {"util", "utils", "helpers", "common", "misc", "base"}
 
