@@ -20,9 +20,11 @@ Loop = Callable[[npt.NDArray[np.float64]], Response]
 Verdict = Literal["steady", "marginal", "likely to oscillate"]
 
 # From the first of each pair on a loop is steady, from the second on marginal, below it likely
-# to oscillate (common practice, no source). Both pairs let the loop peak by about as much.
+# to oscillate. Phase and gain: common practice, no source; both let a loop peak by about as
+# much. Damping: ours; it sees what rings beside the crossover, such as the follower itself.
 STEADY_DEG, MARGINAL_DEG = 45.0, 20.0
 STEADY_DB, MARGINAL_DB = 6.0, 3.0
+STEADY_DAMPING, MARGINAL_DAMPING = 0.1, 0.03
 _LOWEST_DECADE, _HIGHEST_DECADE, _PER_DECADE = 0, 9, 60  # frequencies looked at: 1 Hz to 1 GHz
 _FASTEST = 1e11  # rad/s; poles beyond stand for no charge at all
 _TYPICAL = 2.0 * math.pi * 1e6  # rad/s; unit of time in which poles are looked for
@@ -34,9 +36,10 @@ class Margins:
     """Margins of a loop gain; the worst where there are several crossings.
 
     A margin is None where the loop gain never passes 1 or its phase never passes -180 degrees.
-    Both are the least change to the brink of oscillation; negative where the phase is below
-    -180 degrees at the crossover, or the gain above 1 at the turnover. `peak_db` is the highest closed-loop gain abs(L / (1 + L)), None
-    where there is none because the loop oscillates.
+    In a loop that holds still both are the least change to the brink of oscillation, the gain
+    margin negative if it is a loss of gain; in one that oscillates they are the least of all,
+    commonly negative. `peak_db` is the highest closed-loop gain abs(L / (1 + L)), None where an
+    oscillation leaves none.
     """
 
     crossover_hz: float | None
@@ -47,13 +50,15 @@ class Margins:
     peak_hz: float | None
 
 
-def find_margins(loop: Loop) -> Margins:
-    """Margins of a loop whose gain is positive at direct current.
+def find_margins(loop: Loop, oscillates: bool = False) -> Margins:
+    """Margins of a loop.
 
     Parameters
     ----------
     loop : callable
-        (F,) frequencies in hertz to (F,) complex loop gain L.
+        (F,) frequencies in hertz to (F,) complex loop gain L, which is itself stable.
+    oscillates : bool
+        Whether the closed loop has growing poles, which decides what the worst crossing is.
 
     Returns
     -------
@@ -67,18 +72,21 @@ def find_margins(loop: Loop) -> Margins:
     def at(decade: float) -> complex:
         return complex(loop(np.array([10.0**decade]))[0])
 
-    phases = []
+    phases: list[tuple[float, float]] = []
     for k in _changes(_gain_db(seen)):
         x = brentq(lambda d: _gain_db(at(d)), decades[k], decades[k + 1], xtol=1e-12)
-        phases.append((float(_beyond_deg(at(x))), 10.0**x))
-    gains = []
+        beyond = float(_beyond_deg(at(x)))
+        phases.append((beyond if oscillates else abs(beyond), 10.0**x))
+    gains: list[tuple[float, float]] = []
     for k in _changes(_beyond_deg(seen)):
         if max(seen[k].real, seen[k + 1].real) < 0.0:  # else the phase passes 0 degrees
             x = brentq(lambda d: _beyond_deg(at(d)), decades[k], decades[k + 1], xtol=1e-12)
             gains.append((-float(_gain_db(at(x))), 10.0**x))
-    phase_margin, crossover = min(phases, key=_distance, default=(None, None))
-    gain_margin, turnover = min(gains, key=_distance, default=(None, None))
-    peak_db, peak_hz = _peak(loop, decades, seen)
+    nothing = (None, None)
+    phase_margin, crossover = min(phases, default=nothing)
+    nearest = None if oscillates else _distance
+    gain_margin, turnover = min(gains, key=nearest, default=nothing)
+    peak_db, peak_hz = (None, None) if oscillates else _peak(loop, decades, seen)
     return Margins(crossover, phase_margin, turnover, gain_margin, peak_db, peak_hz)
 
 
@@ -145,19 +153,18 @@ def overshoot_percent(damping: float) -> float:
     return 100.0 * math.exp(-math.pi * damping / math.sqrt(1.0 - damping * damping))
 
 
-def judge(margins: Margins, growing: int) -> Verdict:
-    """Verdict on a loop from its worse margin and its growing poles.
+def judge(margins: Margins, damping: float) -> Verdict:
+    """Verdict on a loop from its worst margin and the least damping ratio of its poles.
 
-    Steady from 45 degrees of phase margin and 6 dB of gain margin on, marginal from 20 degrees
-    and 3 dB on. One growing pole is enough for an oscillation, whatever the margins. A margin
-    that is None asks nothing.
+    Steady from 45 degrees, 6 dB and a damping ratio of 0.1 on, marginal from 20 degrees, 3 dB
+    and 0.03 on. A margin that is None asks nothing; a growing pole has a negative damping ratio.
     """
 
-    def at_least(degrees: float, decibels: float) -> bool:
+    def reaches(degrees: float, decibels: float, ratio: float) -> bool:
         phase, gain = margins.phase_margin_deg, margins.gain_margin_db
-        enough = phase is None or abs(phase) >= degrees
+        enough = damping >= ratio and (phase is None or phase >= degrees)
         return enough and (gain is None or abs(gain) >= decibels)
 
-    if growing or not at_least(MARGINAL_DEG, MARGINAL_DB):
+    if not reaches(MARGINAL_DEG, MARGINAL_DB, MARGINAL_DAMPING):
         return "likely to oscillate"
-    return "steady" if at_least(STEADY_DEG, STEADY_DB) else "marginal"
+    return "steady" if reaches(STEADY_DEG, STEADY_DB, STEADY_DAMPING) else "marginal"

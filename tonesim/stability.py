@@ -7,7 +7,7 @@ estimate from data-sheet figures: what it assumes and what it leaves out stands 
 import functools
 import math
 from collections.abc import Iterable, Iterator, Sequence
-from dataclasses import asdict, dataclass, replace
+from dataclasses import asdict, dataclass
 from typing import Any, NamedTuple
 
 import numpy as np
@@ -28,8 +28,10 @@ from tonesim.loop import (
     response,
 )
 from tonesim.margins import (
+    MARGINAL_DAMPING,
     MARGINAL_DB,
     MARGINAL_DEG,
+    STEADY_DAMPING,
     STEADY_DB,
     STEADY_DEG,
     Margins,
@@ -270,16 +272,15 @@ def judge_loop(
         raise UsageError(f"cable_f is {cable_f} F, expected zero or more")
     network = build_network(circuit, follower, load, cable_f)
     poles, beta = opamp_poles(design.driver.part), circuit.driver.beta
-    margins = find_margins(functools.partial(loop_gain, network, poles, beta))
+    loop = functools.partial(loop_gain, network, poles, beta)
     closed = pencil_poles(*loop_pencil(network, poles, beta))
+    growing = growing_poles(closed)
+    margins = find_margins(loop, growing > 0)
     # Poles a decade below the crossover are the load's own resonances.
     damping = least_damping(closed, 0.1 * (margins.crossover_hz or 0.0))
-    growing = growing_poles(closed)
     follower_grows = growing_poles(pencil_poles(network.g, network.c)) > 0
     if follower_grows:
         margins = Margins(margins.crossover_hz, None, None, None, None, None)
-    elif growing:
-        margins = replace(margins, peak_db=None, peak_hz=None)
     return StabilityCase(
         state=names[0],
         load=names[1],
@@ -290,7 +291,7 @@ def judge_loop(
         damping=damping,
         growing_poles=growing,
         follower_grows=follower_grows,
-        verdict=judge(margins, growing),
+        verdict=judge(margins, damping),
     )
 
 
@@ -460,5 +461,6 @@ def _assumptions(design: Design, poles: OpAmpPoles, dead: bool) -> Iterator[str]
         )
     yield (
         f"Steady is called a loop from {STEADY_DEG:g} degrees and {STEADY_DB:g} dB of margin on, "
-        f"marginal from {MARGINAL_DEG:g} degrees and {MARGINAL_DB:g} dB on (common practice)."
+        f"marginal from {MARGINAL_DEG:g} degrees and {MARGINAL_DB:g} dB on (common practice); "
+        f"poles with a damping ratio below {STEADY_DAMPING:g} or {MARGINAL_DAMPING:g} count alike."
     )
