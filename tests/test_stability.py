@@ -12,6 +12,7 @@ from hypothesis import given, settings
 from hypothesis import strategies as st
 from scipy import signal
 
+from tonesim import stage
 from tonesim.catalogue import load_catalogue
 from tonesim.circuit import Circuit, Load, load_impedance, load_resistance, lower
 from tonesim.curve import idle_point, static_point
@@ -677,8 +678,9 @@ def test_values_outside_their_range_are_refused():
         estimate_stability(design, shares=(1.5,))
 
 
-def test_a_stage_without_idle_point_is_refused():
+def test_a_stage_without_idle_point_is_refused(monkeypatch):
     design, circuit = _solved("plain")
     restless = dataclasses.replace(idle_point(circuit), converged=False)
+    monkeypatch.setattr(stage, "idle_point", lambda _: restless)
     with pytest.raises(SolverError, match="'bench piece': the stage finds no idle point"):
-        follower_at(circuit, design, idle=restless)
+        follower_at(circuit, design)

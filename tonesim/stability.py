@@ -14,9 +14,9 @@ import numpy as np
 import numpy.typing as npt
 
 from tonesim.circuit import Circuit, Load, load_resistance, lower
-from tonesim.curve import ClipLevel, OperatingPoint, clip_levels, idle_point
+from tonesim.curve import ClipLevel, OperatingPoint, clip_levels
 from tonesim.design import SIDES, Design, Side
-from tonesim.errors import SolverError, UsageError
+from tonesim.errors import UsageError
 from tonesim.kernel.static import StaticPoint, solve_static
 from tonesim.loop import (
     Network,
@@ -49,6 +49,7 @@ from tonesim.smallsignal import (
     device_ft_hz,
     linearise,
 )
+from tonesim.stage import find_idle
 from tonesim.units import format_quantity
 
 CABLES_F = (1e-9, 10e-9, 100e-9)  # capacitance across the load
@@ -127,12 +128,7 @@ class _Stage(NamedTuple):
 
 
 def _stage(circuit: Circuit, design: Design, idle: OperatingPoint | None) -> _Stage:
-    rest = idle_point(circuit) if idle is None else idle
-    if not rest.converged:
-        raise SolverError(
-            f"design {design.title!r}: the stage finds no idle point "
-            f"(imbalance {rest.residual_a:.3g} A, expected below 1e-6 A)"
-        )
+    rest = find_idle(circuit, design.title) if idle is None else idle
     return _Stage(
         circuit,
         design,
@@ -346,19 +342,19 @@ def _edge(stage: _Stage, load: Load, most_v: float, enough: float) -> Follower:
 def _idle_states(
     stage: _Stage, load: Load, clips: dict[Side, ClipLevel]
 ) -> Iterator[tuple[str, Follower]]:
-    """Without a signal, or where that is a dead zone, just outside it."""
+    """Just outside the dead zone of each half that has one; else, or beside it, no signal."""
     siemens = 1.0 / load_resistance(load)
     rest = _at_rest(stage, siemens)
     idle_gain = _gain_at_rest(build_network(stage.circuit, rest, load))
-    dead = False
+    dead = 0
     for side in _sides(stage):
         full_v = _FULL * clips[side].level_v
         full = _held_at(stage, full_v, siemens)
         enough = _DEAD * _gain_at_rest(build_network(stage.circuit, full, load))
         if idle_gain < enough:
-            dead = True
+            dead += 1
             yield f"outside the dead zone, {side} half", _edge(stage, load, full_v, enough)
-    if not dead:
+    if dead < len(_sides(stage)):
         yield IDLE, rest
 
 
@@ -395,7 +391,7 @@ def estimate_stability(
         if not 0.0 < share < 1.0:
             raise UsageError(f"a share of the clip level is {share:g}, expected 0 to 1")
     circuit = lower(design)
-    idle = idle_point(circuit)
+    idle = find_idle(circuit, design.title)
     stage = _stage(circuit, design, idle)
     clips = dict(zip(SIDES, clip_levels(circuit, idle), strict=True))
     unloaded = _without_load(circuit, design)
