@@ -14,10 +14,14 @@ The modules, in the order in which one may import another (never the other way r
 - `tonesim.thermal`: junction temperatures, heat sinks, thermal runaway
 - `tonesim.designfile`: design files and presets to a checked `Design`, and back
 - `tonesim.circuit`: a design to bare numbers
+- `tonesim.loop`: a feedback loop in small signals: op-amp poles, linear networks
+- `tonesim.margins`: margins, poles and verdict of a loop
 - `tonesim.curve`: transfer surfaces, idle point, clip levels
 - `tonesim.front`: gain stage, tone network and volume in numbers
+- `tonesim.smallsignal`: the stage around an operating point, with the charge of its devices
 - `tonesim.stage`: a design made ready to run
 - `tonesim.check`: a stage at rest in the figures of the bench
+- `tonesim.stability`: how near the loop of a design is to oscillation; output impedance
 - `tonesim.oversample`: up to the internal rate and down again
 - `tonesim.processor`: the stage as a processor of blocks, `Amplifier`
 - `tonesim.wav`: recordings in, results out
