@@ -6,6 +6,7 @@ The modules, in the order in which one may import another (never the other way r
 - `tonesim.units`: quantities as builders write them, decibels, preferred values
 - `tonesim.signals`: what a signal is, and test signals
 - `tonesim.harmonics`: distortion, hum and residue of coherent records
+- `tonesim.pool`: work spread over threads
 - `tonesim.kernel`: compiled numerical core: devices, halves, driver, rails, load, filters, front
 - `tonesim.record`: tables of a file as frozen models, errors as sentences
 - `tonesim.catalogue`: parts, their laws and the part files
@@ -21,6 +22,14 @@ The modules, in the order in which one may import another (never the other way r
 - `tonesim.smallsignal`: the stage around an operating point, with the charge of its devices
 - `tonesim.stage`: a design made ready to run
 - `tonesim.check`: a stage at rest in the figures of the bench
+- `tonesim.probe`: the stage at its internal rate with probes on its nodes
+- `tonesim.bench`: a design on the bench, and what the meters read with a sine
+- `tonesim.idle`: idle currents over temperature, trim of the offset, margin to runaway
+- `tonesim.response`: gain and bandwidth
+- `tonesim.power`: power, rails and heat
+- `tonesim.distortion`: distortion against level and frequency, and with two tones
+- `tonesim.transient`: square wave and power-up
+- `tonesim.heat`: heat sinks, and whether idle settles on them
 - `tonesim.stability`: how near the loop of a design is to oscillation; output impedance
 - `tonesim.oversample`: up to the internal rate and down again
 - `tonesim.processor`: the stage as a processor of blocks, `Amplifier`
