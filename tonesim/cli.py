@@ -347,6 +347,57 @@ def check(source: str, changes: tuple[str, ...], parts_file: str | None, as_json
 
 
 @commands.command(
+    epilog="\b\nExamples:\n  tonesim bench no-chain\n  tonesim bench full-chain idle heat "
+    "--set output.emitter_ohm=0R47"
+)
+@click.argument("source", metavar="DESIGN")
+@click.argument("sections", metavar="[SECTION]...", nargs=-1)
+@_design_options
+@click.option(
+    "--ambient", metavar="CELSIUS", default="40", help="Air around the heat sinks; 40 by default."
+)
+@click.option("--csv", "csv_file", metavar="FILE", help="Write every figure, a line each.")
+@click.option("--pictures", metavar="FOLDER", help="Draw curves and waveforms, SVG and PNG.")
+@_as_json
+def bench(
+    source: str,
+    sections: tuple[str, ...],
+    changes: tuple[str, ...],
+    parts_file: str | None,
+    ambient: str,
+    csv_file: str | None,
+    pictures: str | None,
+    as_json: bool,
+) -> None:
+    """Measure a design on the test bench.
+
+    A sheet of what meters, scope and distortion analyser will show, in the order in which one
+    measures. SECTION picks parts of it: idle, gain, clip, power, heat, distortion, square,
+    stability, power-up. Levels are rms unless called peak; a loudspeaker is replaced by its rated
+    resistance except where it is named.
+    """
+    from tonesim.sheet import check_sections, measure_sheet
+
+    check_sections(sections)
+    air = _quantity("--ambient", ambient, "°C")
+    design, _ = _load(source, changes, parts_file)
+    _warn_of_compiling()
+    from tonesim.show import progress_bars, show_sheet
+    from tonesim.tables import tables, to_csv
+
+    with progress_bars(1000) as begin:
+        _bench, sheet = measure_sheet(design, sections, air, begin("bench", 1000))
+    if csv_file is not None:
+        from tonesim.wav import write_text_aside
+
+        write_text_aside(csv_file, to_csv(tables(sheet)))
+    if as_json:
+        _print_json(sheet.as_dict())
+    else:
+        show_sheet(sheet, tables(sheet))
+
+
+@commands.command(
     epilog="\b\nExamples:\n  tonesim parts diodes\n  tonesim parts transistors TIP122"
 )
 @click.argument("kind", required=False, type=click.Choice(KINDS, case_sensitive=False))

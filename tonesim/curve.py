@@ -23,8 +23,9 @@ _DH_FINE, _DH_COARSE = 1 / 32, 1 / 4  # [V]
 _BEYOND = 6.0  # reach of the grid past the sum of both rails [V]
 _MOST_EMITTER_DROP = 8.0  # the fine zones grow with the emitter resistors' drop up to this [V]
 _RAIL_STEP = 1 / 384_000  # step for rails at rest [s]
-_FAR = 1e6  # input that asks for the clip level [V]
+FAR_V = 1e6  # input that asks for the clip level [V]
 _KEPT_SURFACES = 16
+_NEAR = 0.5  # share of its current limit from which the op-amp counts as near it
 _TIE = 0.05  # share by which two limits' effects may differ and still be a tie
 
 
@@ -284,9 +285,12 @@ def idle_point(circuit: Circuit) -> OperatingPoint:
     )
 
 
-def _battery(half: HalfParams, chain_v: float) -> HalfParams:
-    """The half with its chain replaced by a battery, which conducts both ways."""
-    return half._replace(chain=CHAIN_NONE, chain_shift=chain_v)
+def chain_battery(half: HalfParams, chain_a: float) -> HalfParams:
+    """The half with its chain replaced by a battery of what it holds at a current.
+
+    A battery conducts both ways: the base cannot starve.
+    """
+    return half._replace(chain=CHAIN_NONE, chain_shift=chain_voltage(half, chain_a))
 
 
 def clip_levels(circuit: Circuit, idle: OperatingPoint) -> tuple[ClipLevel, ClipLevel]:
@@ -319,7 +323,7 @@ def _clip(circuit: Circuit, idle: OperatingPoint, sign: float) -> ClipLevel:
         lower: HalfParams = circuit.lower,
         extra: float = 0.0,
     ) -> StaticPoint:
-        s: StaticPoint = solve_static(sign * _FAR, v_p, v_n, g, extra, upper, lower, driver)
+        s: StaticPoint = solve_static(sign * FAR_V, v_p, v_n, g, extra, upper, lower, driver)
         return s
 
     point = level()
@@ -334,8 +338,8 @@ def _clip(circuit: Circuit, idle: OperatingPoint, sign: float) -> ClipLevel:
             driver=q._replace(i_source=NO_LIMIT, i_sink=NO_LIMIT, r_source=1e-3, r_sink=1e-3)
         ),
         "base starvation": level(
-            upper=_battery(circuit.upper, chain_voltage(circuit.upper, idle.upper_chain_a)),
-            lower=_battery(circuit.lower, chain_voltage(circuit.lower, idle.lower_chain_a)),
+            upper=chain_battery(circuit.upper, idle.upper_chain_a),
+            lower=chain_battery(circuit.lower, idle.lower_chain_a),
         ),
         "saturation": level(extra=20.0),
     }
@@ -343,10 +347,9 @@ def _clip(circuit: Circuit, idle: OperatingPoint, sign: float) -> ClipLevel:
     cause = max(gains, key=lambda name: gains[name])
     swing, current = gains["driver swing"], gains["driver current"]
     if cause.startswith("driver") and abs(swing - current) < _TIE * max(swing, current):
-        # Either would do: named is the one that takes more of the op-amp's voltage.
-        lost_v = abs(point.v_x - point.v_d)
-        headroom_v = q.drop_positive if sign > 0 else q.drop_negative
-        cause = "driver current" if lost_v > headroom_v else "driver swing"
+        # Either would do; it is the current where the op-amp nears its limit, else its swing.
+        limit = q.i_source if sign > 0 else q.i_sink
+        cause = "driver current" if abs(point.i_amp) > _NEAR * limit else "driver swing"
     rail = circuit.rail_positive if sign > 0 else circuit.rail_negative
     load_a = reach * g
     if rail.i_limit < NO_LIMIT and load_a > rail.i_limit:

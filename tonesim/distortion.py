@@ -25,7 +25,7 @@ from tonesim.units import db_to_ratio
 LEVELS_DB = (-1.0, -20.0, -40.0)  # relative to the clip point
 _LOWEST_V = 0.010  # of the output, rms
 _PAST_CLIP_DB = 6.0
-_LEVELS = 28
+_LEVELS = 20
 _FREQUENCIES = (20, 30, 50, 100, 200, 500, 1e3, 2e3, 5e3, 7e3, 10e3, 15e3, 20e3, 30e3, 40e3)
 _LONG_S = 0.5  # record below this frequency, so that it holds enough cycles
 _LOW_HZ = 150.0

@@ -30,7 +30,8 @@ class Cooling:
     is the largest sink-to-air resistance that keeps the junction at its rating there (None: none
     suffices; at most what the bare package has); `case_c` and `allowed_w` the case temperature it
     then has and the derated power at it. `cool` and `tracking` say where idle settles on this sink
-    with the chain at ambient, or as warm as the junctions.
+    with the chain at ambient, or as warm as the junctions; where it does not even with tracking,
+    `idle_rth_sa_k_per_w` is the largest sink it settles on, None if there is none.
     """
 
     side: Side
@@ -46,6 +47,7 @@ class Cooling:
     allowed_w: float
     cool: Equilibrium | None
     tracking: Equilibrium | None
+    idle_rth_sa_k_per_w: float | None
 
 
 @dataclass(frozen=True)
@@ -79,6 +81,10 @@ def _cooling(bench: Bench, power: PowerSheet, side: Side, ambient_c: float) -> C
     used = HeatPath(part.rth_jc_k_per_w, RTH_CS_K_PER_W, rth or 0.0)
     junction = junction_temperature(worst, used, ambient_c)
     case = junction - worst * part.rth_jc_k_per_w
+    tracking = _settled(bench, side, used, ambient_c, follows=True) if rth else None
+    idle_rth = rth
+    if tracking is not None and not tracking.settled:
+        idle_rth = _sink_for_idle(bench, side, used, ambient_c)
     return Cooling(
         side=side,
         part=part.name,
@@ -92,8 +98,28 @@ def _cooling(bench: Bench, power: PowerSheet, side: Side, ambient_c: float) -> C
         junction_c=junction,
         allowed_w=derated_power(case, part.rth_jc_k_per_w, part.tj_max_c, part.power_w),
         cool=_settled(bench, side, used, ambient_c, follows=False) if rth else None,
-        tracking=_settled(bench, side, used, ambient_c, follows=True) if rth else None,
+        tracking=tracking,
+        idle_rth_sa_k_per_w=idle_rth,
     )
+
+
+def _sink_for_idle(bench: Bench, side: Side, path: HeatPath, ambient_c: float) -> float | None:
+    """Largest sink-to-air resistance idle settles on with tracking, within a tenth; None if none.
+
+    `path` holds one on which it does not.
+    """
+    low, high = 0.0, path.rth_sa_k_per_w
+
+    def settles(rth: float) -> bool:
+        tried = HeatPath(path.rth_jc_k_per_w, path.rth_cs_k_per_w, rth)
+        return _settled(bench, side, tried, ambient_c, follows=True).settled
+
+    if not settles(low):
+        return None
+    while high - low > 0.1 * high:
+        middle = 0.5 * (low + high)
+        low, high = (middle, high) if settles(middle) else (low, middle)
+    return low
 
 
 def _settled(

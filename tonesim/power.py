@@ -60,7 +60,7 @@ class PowerSheet:
     """Power, rails and heat.
 
     `at_thd` holds the reading for each of `THD_LEVELS`, None where the stage distorts more than
-    that before it clips, or never so much. `hum_idle_v` and `hum_full_v` are rms at the output.
+    that before it clips, or never so much. Ripple is peak to peak, hum rms at the output.
     """
 
     bench_ohm: float
@@ -71,6 +71,7 @@ class PowerSheet:
     burst_s: float
     positive_burst: RailInBurst
     negative_burst: RailInBurst
+    ripple_idle_v: tuple[float, float]
     hum_idle_v: float
     hum_full_v: float | None
     solved: Solved
@@ -189,6 +190,7 @@ def measure_power(bench: Bench, progress: Progress | None = None) -> PowerSheet:
         burst_s=_BURST_S[1],
         positive_burst=rail_in_burst(trace.positive_v, rate, mains),
         negative_burst=rail_in_burst(trace.negative_v, rate, mains),
+        ripple_idle_v=(bench.rest.upper.rail_ripple_v, bench.rest.lower.rail_ripple_v),
         hum_idle_v=hum_at_idle(bench) if mains else 0.0,
         hum_full_v=clip.harmonics.hum_v if mains else 0.0,
         solved=sum((each.solved for each in (*probes, bench.probe)), Solved()),

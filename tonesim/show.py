@@ -11,7 +11,7 @@ from typing import Any
 from rich import box
 from rich.console import Console
 from rich.progress import BarColumn, Progress, TextColumn, TimeRemainingColumn
-from rich.table import Table
+from rich.table import Table as Grid
 from rich.text import Text
 
 from tonesim.catalogue import CabinetShape, Diode, Loudspeaker, OpAmp, Part, Transistor, diode_drop
@@ -19,6 +19,8 @@ from tonesim.check import HalfAtRest, StageCheck
 from tonesim.demo import DemoReport, Heard
 from tonesim.render import CEILING_DBTP
 from tonesim.report import RenderReport
+from tonesim.sheet import Sheet
+from tonesim.tables import Table, shown
 from tonesim.units import db_to_ratio, format_quantity, ratio_to_db
 
 Row = Sequence[str]
@@ -60,7 +62,7 @@ def print_table(title: str, columns: Row, rows: Sequence[Row]) -> None:
         _print_plain(title, columns, cells)
         return
     headed = any(columns)
-    table = Table(title=Text(printable(title)), title_justify="left", show_header=headed)
+    table = Grid(title=Text(printable(title)), title_justify="left", show_header=headed)
     table.box = box.SIMPLE_HEAD if headed else None
     for column in columns:
         table.add_column(Text(column), overflow="fold")
@@ -233,6 +235,37 @@ def show_check(check: StageCheck) -> None:
     print_table("whole stage", ("", ""), rows)
     for caution in check.cautions:
         print_line(f"caution: {caution}")
+
+
+def show_sheet(sheet: Sheet, found: Sequence[Table]) -> None:
+    """Print a bench sheet: its tables with their notes, and what deserves a doubt."""
+    print_line(f"{sheet.title} ({sheet.design_key_sha256[:12]})")
+    section = ""
+    for table in found:
+        if table.section != section:
+            section = table.section
+            print_line()
+            print_line(section.upper())
+        rows = [
+            [shown(value, unit) for value, (_, unit) in zip(row, table.columns, strict=True)]
+            for row in table.rows
+        ]
+        print_table(table.title, [heading for heading, _ in table.columns], rows)
+        for note in table.notes:
+            print_line(f"  {note}")
+    print_line()
+    for caution in sheet.rest.cautions:
+        print_line(f"Caution: {caution}")
+    if sheet.unsettled_steps:
+        print_line(
+            f"Caution: {sheet.unsettled_steps} step(s) of the computation did not settle; figures "
+            "that move in time are in doubt."
+        )
+    print_line(
+        "Computed from typical parts. Before you measure the real one: mains voltage kills, "
+        "reservoirs hold charge, heat sinks burn; a current-limited supply and a resistor first, "
+        "the loudspeaker last."
+    )
 
 
 def _transistor_row(part: Transistor) -> Row:

@@ -64,14 +64,28 @@ class Thump:
 
 
 @dataclass(frozen=True)
-class TransientSheet:
-    """Square waves and power-up."""
+class SquareSheet:
+    """Square waves at a small and a large level."""
 
     square_hz: float
-    squares: tuple[SquareReading, ...]
+    readings: tuple[SquareReading, ...]
+    unsettled_steps: int
+
+
+@dataclass(frozen=True)
+class PowerUpSheet:
+    """Power-up with and without load, as drawn and as parts come.
+
+    `ramp_s` is the rise time of a supply that is not fed from the mains.
+    """
+
     ramp_s: float | None
     thumps: tuple[Thump, ...]
-    unsettled_steps: int
+
+    @property
+    def unsettled_steps(self) -> int:
+        """Steps of all of them that did not settle."""
+        return sum(thump.unsettled_steps for thump in self.thumps)
 
 
 def square_trace(bench: Bench, share: float) -> tuple[Probe, Trace]:
@@ -135,14 +149,14 @@ def _let_go(trace: Trace, rate_hz: float) -> float:
     return float(np.max(ends[1::2] - ends[::2], initial=0)) / rate_hz
 
 
-def measure_squares(bench: Bench) -> tuple[tuple[SquareReading, ...], int]:
-    """Square waves at a small and a large level; also the unsettled steps."""
+def measure_squares(bench: Bench) -> SquareSheet:
+    """Square waves at a small and a large level."""
     readings, unsettled = [], 0
     for share in SQUARE_SHARES:
         probe, trace = square_trace(bench, share)
         readings.append(read_square(trace, probe.rate_hz, share * bench.clip_v))
         unsettled += probe.solved.unsettled_steps
-    return tuple(readings), unsettled
+    return SquareSheet(SQUARE_HZ, tuple(readings), unsettled)
 
 
 def power_up(bench: Bench, *, loaded: bool, unequal: bool) -> tuple[Trace, Thump]:
@@ -250,18 +264,11 @@ def _read_thump(
     )
 
 
-def measure_transients(bench: Bench) -> TransientSheet:
-    """Square waves at two levels, and power-up with and without load."""
-    squares, unsettled = measure_squares(bench)
+def measure_power_up(bench: Bench) -> PowerUpSheet:
+    """Power-up with and without load, as drawn and as parts come."""
     thumps = tuple(
         power_up(bench, loaded=loaded, unequal=unequal)[1]
         for unequal in (False, True)
         for loaded in (True, False)
     )
-    return TransientSheet(
-        square_hz=SQUARE_HZ,
-        squares=squares,
-        ramp_s=None if bench.stage.circuit.mains_hz else RAMP_S,
-        thumps=thumps,
-        unsettled_steps=unsettled + sum(thump.unsettled_steps for thump in thumps),
-    )
+    return PowerUpSheet(None if bench.stage.circuit.mains_hz else RAMP_S, thumps)
