@@ -458,8 +458,8 @@ def _distortion(found: DistortionSheet) -> Iterator[Table]:
             for points in zip(*found.by_frequency, strict=True)
         ),
         (
-            "Harmonics to 80 kHz and to the tenth at least; frequencies lie a little beside the round "
-            "ones, clear of the mains.",
+            "Harmonics to 80 kHz and to the tenth at least; frequencies lie a little beside the "
+            "round ones, clear of the mains.",
         ),
     )
     yield Table(
