@@ -20,6 +20,7 @@ from tonesim.check import StageCheck, check_design
 from tonesim.design import Design
 from tonesim.designfile import demo_audio_folder, load_design
 from tonesim.errors import RecordingError
+from tonesim.harmonics import analyse_harmonics
 from tonesim.processor import Amplifier
 from tonesim.render import CEILING_DBTP, Progress, perform
 from tonesim.report import (
@@ -284,8 +285,5 @@ def total_distortion(stage: Amplifier, amplitude_v: float) -> float:
     frequency = coherent_frequency(_TONE_HZ, _RATE, _RECORD)
     stage.reset()
     y = stage.process(sine(frequency, amplitude_v, _RATE, 2 * _RECORD))[_RECORD:]
-    spectrum = np.abs(np.fft.rfft(y))
-    bin_ = round(frequency * _RECORD / _RATE)
-    most = int(_HIGHEST_HZ / frequency)
-    harmonics = spectrum[bin_ * np.arange(2, most + 1)]
-    return float(np.sqrt(np.sum(np.square(harmonics))) / spectrum[bin_])
+    cycles = round(frequency * _RECORD / _RATE)
+    return analyse_harmonics(y, cycles, _RATE, _HIGHEST_HZ).thd_f
