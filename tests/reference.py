@@ -91,7 +91,9 @@ def _residual(
     out[0] = (yp[0] - q.slew * z / math.sqrt(1.0 + z * z)) * 1e-6
     e = v_x - v_d
     limit = q.i_source if e > 0.0 else q.i_sink
-    s = e / ((q.r_source if e > 0.0 else q.r_sink) * limit)
+    mean = (q.r_source + q.r_sink) / 2.0
+    far = (q.r_source if e > 0.0 else q.r_sink) - mean
+    s = e / ((mean + far / (1.0 + (0.2 / e) ** 2 if e else math.inf)) * limit)
     out[2] = (limit * s / math.sqrt(1.0 + s * s) + 1e-6 * e + down_up - down_low) * 1e3
     n = b.size
     i_load = d * v_o

@@ -44,7 +44,9 @@ RANKS: dict[str, int] = {
     "smallsignal": 9,
     "stage": 10,
     "check": 11,
+    "match": 2,
     "probe": 11,
+    "twin": 11,
     "processor": 11,
     "stability": 11,
     "wav": 11,
@@ -87,10 +89,12 @@ DOORS: dict[str, set[str]] = {
         "level",
         "margins",
         "masking",
+        "match",
         "oversample",
         "power",
         "response",
         "thermal",
+        "twin",
     },
 }
 BANNED_NAMES = {"util", "utils", "helpers", "common", "misc", "base"}

@@ -426,8 +426,8 @@ def test_idle_is_the_point_the_bench_shows():
     follower = follower_at(circuit, design, idle=idle)
     # The bench counts the catch diode's leak of 22 nA as well.
     assert follower.upper.output_a == pytest.approx(idle.upper_current_a, abs=3e-8)
-    # At rest the driver neither gives nor takes: the larger of its two sides counts.
-    resting = max(circuit.driver.r_source, circuit.driver.r_sink)
+    # At rest the driver neither gives nor takes: the mean of its two sides counts.
+    resting = 0.5 * (circuit.driver.r_source + circuit.driver.r_sink)
     assert follower.driver_ohm == pytest.approx(resting, rel=1e-2)
     assert follower.lower.chain_a == pytest.approx(idle.lower_chain_a, rel=1e-9)
     assert follower.upper.first_gm_s is not None

@@ -6,6 +6,7 @@ The modules, in the order in which one may import another (never the other way r
 - `tonesim.units`: quantities as builders write them, decibels, preferred values
 - `tonesim.signals`: what a signal is, and test signals
 - `tonesim.harmonics`: distortion, hum and residue of coherent records
+- `tonesim.match`: a fair reference: what a linear stage could have made
 - `tonesim.pool`: work spread over threads
 - `tonesim.kernel`: compiled numerical core: devices, halves, driver, rails, load, filters, front
 - `tonesim.record`: tables of a file as frozen models, errors as sentences
@@ -21,6 +22,7 @@ The modules, in the order in which one may import another (never the other way r
 - `tonesim.front`: gain stage, tone network and volume in numbers
 - `tonesim.smallsignal`: the stage around an operating point, with the charge of its devices
 - `tonesim.stage`: a design made ready to run
+- `tonesim.twin`: the stage without its dead zone, and without any distortion
 - `tonesim.check`: a stage at rest in the figures of the bench
 - `tonesim.probe`: the stage at its internal rate with probes on its nodes
 - `tonesim.bench`: a design on the bench, and what the meters read with a sine

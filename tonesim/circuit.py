@@ -15,7 +15,7 @@ import numpy.typing as npt
 from tonesim.catalogue import Diode, Loudspeaker, OpAmp, Transistor, saturation_current
 from tonesim.design import BatterySupply, BenchSupply, Design, Multiplier, TransformerSupply
 from tonesim.kernel.devices import BipolarParams
-from tonesim.kernel.driver import DriverParams
+from tonesim.kernel.driver import BLEND_V, DriverParams
 from tonesim.kernel.half import CHAIN_DROPS, CHAIN_MULTIPLIER, CHAIN_NONE, HalfParams
 from tonesim.kernel.load import LoadParams
 from tonesim.kernel.rails import RECTIFIED, RESISTIVE, STIFF, RailParams
@@ -206,6 +206,57 @@ def lower_half(design: Design, upper: bool) -> HalfParams:
     )
 
 
+def _output_resistances(part: OpAmp) -> tuple[tuple[float, float], tuple[float, float]]:
+    """Output resistance and drop of both sides that meet the swings into 10 and 2 kilohm."""
+    sides = (
+        (part.swing_10k_positive_v, part.swing_2k_positive_v, part.source_limit_a),
+        (-part.swing_10k_negative_v, -part.swing_2k_negative_v, part.sink_limit_a),
+    )
+
+    def softened(swing_v: float, ohm: float, limit: float) -> float:
+        # The smooth current limit already costs something at the heavier load.
+        i = swing_v / ohm
+        return i / math.sqrt(1.0 - min(i / limit, 0.99) ** 2)
+
+    pulls = [
+        (light - heavy, softened(light, 10e3, limit), softened(heavy, 2e3, limit), heavy)
+        for light, heavy, limit in sides
+    ]
+    found = [
+        max(lost / (i_heavy - i_light), _LEAST_OUTPUT_OHM) for lost, i_light, i_heavy, _ in pulls
+    ]
+    # Each side's resistance at small currents is the mean of both: a few rounds settle it.
+    for _ in range(60):
+        mean = 0.5 * (found[0] + found[1])
+        found = [
+            max(
+                r
+                + (lost - (_across(i_heavy, r, mean) - _across(i_light, r, mean)))
+                / (i_heavy - i_light),
+                _LEAST_OUTPUT_OHM,
+            )
+            for r, (lost, i_light, i_heavy, _) in zip(found, pulls, strict=True)
+        ]
+    mean = 0.5 * (found[0] + found[1])
+    drops = [
+        part.at_rail_v - heavy - _across(i_heavy, r, mean)
+        for r, (_, _, i_heavy, heavy) in zip(found, pulls, strict=True)
+    ]
+    return (found[0], drops[0]), (found[1], drops[1])
+
+
+def _across(current_a: float, ohm: float, mean_ohm: float) -> float:
+    """Voltage across an output resistance that is its side's at much current, the mean at little.
+
+    Solves e = R(e) i (see kernel/driver.py) by repeated substitution, which contracts.
+    """
+    e = ohm * current_a
+    for _ in range(60):
+        share = e * e / (e * e + BLEND_V * BLEND_V)
+        e = (mean_ohm + (ohm - mean_ohm) * share) * current_a
+    return e
+
+
 def lower_driver(design: Design) -> DriverParams:
     """Op-amp and feedback network.
 
@@ -214,22 +265,7 @@ def lower_driver(design: Design) -> DriverParams:
     """
     driver = design.driver
     part: OpAmp = driver.part
-    light, heavy = 10e3, 2e3
-
-    def side(swing_light: float, swing_heavy: float, limit: float) -> tuple[float, float]:
-        i_light, i_heavy = swing_light / light, swing_heavy / heavy
-        # The smooth current limit already costs something at the heavier load.
-        r_light = i_light / math.sqrt(1.0 - min(i_light / limit, 0.99) ** 2)
-        r_heavy = i_heavy / math.sqrt(1.0 - min(i_heavy / limit, 0.99) ** 2)
-        r = max((swing_light - swing_heavy) / (r_heavy - r_light), _LEAST_OUTPUT_OHM)
-        return r, part.at_rail_v - swing_heavy - r * r_heavy
-
-    r_source, drop_positive = side(
-        part.swing_10k_positive_v, part.swing_2k_positive_v, part.source_limit_a
-    )
-    r_sink, drop_negative = side(
-        -part.swing_10k_negative_v, -part.swing_2k_negative_v, part.sink_limit_a
-    )
+    (r_source, drop_positive), (r_sink, drop_negative) = _output_resistances(part)
     own = driver.positive_v is not None
     return DriverParams(
         omega=2.0 * math.pi * part.gain_bandwidth_hz,

@@ -11,6 +11,7 @@ from typing import NamedTuple
 
 from tonesim.kernel.jit import kernel
 
+BLEND_V = 0.2  # across the output resistance: where both sides have parted
 LEAK = 1e-6  # conductance beside the current limit, keeps the slope above zero [S]
 
 
@@ -21,8 +22,8 @@ class DriverParams(NamedTuple):
     slew: float  # V/s
     per_a0: float  # 1 / DC gain
     beta: float  # ground leg / (ground leg + feedback)
-    r_source: float  # output resistance while it gives current, ohm
-    r_sink: float  # while it takes current, ohm
+    r_source: float  # output resistance while it gives much current, ohm
+    r_sink: float  # while it takes much current, ohm
     i_source: float  # ampere
     i_sink: float  # ampere
     drop_positive: float  # swing limit below the positive rail, volt
@@ -43,13 +44,24 @@ def slewed(y):
 
 @kernel
 def output_current(e, p):
-    """Current out of the op-amp for the voltage e across its output resistance; slope."""
+    """Current out of the op-amp for the voltage e across its output resistance; slope.
+
+    Each side has a resistance and a limit of its own. Around zero current both sides share their
+    mean, R = r0 + (r1 - r0) e^2 / (e^2 + E^2): no step in the slope, which a class-AB output
+    does not have. The current rises with e as r1 <= 2 r0.
+    """
     if e > 0.0:
-        r, limit = p.r_source, p.i_source
+        r1, limit = p.r_source, p.i_source
     else:
-        r, limit = p.r_sink, p.i_sink
+        r1, limit = p.r_sink, p.i_sink
+    r0 = 0.5 * (p.r_source + p.r_sink)
+    e2 = e * e
+    share = e2 / (e2 + BLEND_V * BLEND_V)
+    r = r0 + (r1 - r0) * share
     s, slope = slewed(e / (r * limit))
-    return limit * s + LEAK * e, slope / r + LEAK
+    # e dR/de = 2 (r1 - r0) share (1 - share)
+    g = slope * (r - 2.0 * (r1 - r0) * share * (1.0 - share)) / (r * r)
+    return limit * s + LEAK * e, g + LEAK
 
 
 @kernel

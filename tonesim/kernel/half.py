@@ -50,6 +50,7 @@ class HalfParams(NamedTuple):
     g_be: float  # multiplier: base to emitter, siemens
     catch: BipolarParams  # catch diode (only i_s and n_vt are read)
     catch_r: float  # its series resistance, ohm
+    drive_shift: float = 0.0  # battery in the drive: the half turns on that much earlier, volt
 
 
 class HalfPoint(NamedTuple):
@@ -224,6 +225,7 @@ def eliminate(j, f):
 @kernel
 def first_guess(u, h, p, x):
     """A start with every junction cut off, from which Newton always gets home."""
+    u += p.drive_shift
     x[3] = 0.0
     if p.chain == CHAIN_NONE and u > h:
         # The drive holds the base above its collector.
@@ -252,6 +254,7 @@ def solve_half(u, h_feed, h_collector, p, x):
     -------
     HalfPoint
     """
+    u += p.drive_shift
     f = np.empty(4)
     j = np.empty((4, 4))
     steps = 0
