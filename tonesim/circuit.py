@@ -80,7 +80,7 @@ class Circuit(NamedTuple):
     load: Load
     bench_ohm: float  # resistor that stands for the load on the bench, ohm
     gain: float  # volts at the op-amp's input per volt at the jack, or behind the front end
-    front: Front | None  # None: straight from the jack
+    front: Front | None = None  # None: straight from the jack
 
 
 def _bipolar(
