@@ -24,6 +24,7 @@ from tonesim.measured import LEAST_SERIES, METER, MeasuredTable
 
 Array = npt.NDArray[np.float64]
 
+_NOTHING = 1e-6  # share of the largest output that no meter tells from zero
 _WINDOW = 0.05  # gain is taken over this share of a side's largest output
 _KNEE_GAIN = 0.8  # a side clips where its gain stays below this share of its highest
 _STRAIGHT_GAIN = 0.95  # and is straight as far as it keeps this one
@@ -48,6 +49,7 @@ def smooth_rows(table: MeasuredTable, load_ohm: float) -> Rows:
     """
     driven = np.array(table.driven_v) * table.drive_gain
     y = np.asarray(isotonic_regression(np.array(table.output_v)).x)
+    y = np.where(np.abs(y) < _NOTHING * np.max(np.abs(y)), 0.0, y)
     series = LEAST_SERIES * y
     u = np.asarray(isotonic_regression(driven - y - series).x) + series
     kept = np.concatenate([[True], np.diff(u) > 1e-9])
@@ -64,7 +66,8 @@ def knee_row(rows: Rows) -> int:
     """
     x, y = rows.u + rows.output_v, rows.output_v
     first = int(np.argmax(y > 0.0))
-    start = max(first - 1, 0)
+    # The step out of the other side's currents is no gain of this one.
+    start = first - 1 if y[first - 1] == 0.0 else first
     stretch = _WINDOW * y[-1]
     ends = np.minimum(np.searchsorted(x, x + stretch), x.size - 1)
     gains = np.zeros(x.size)
