@@ -17,7 +17,7 @@ ROOT = Path(__file__).parent.parent
 README = (ROOT / "README.md").read_text()
 COMMANDS = sorted(cli.commands.commands)
 WITH_DOCTESTS = (
-    *("units", "catalogue", "design", "circuit", "front"),
+    *("units", "catalogue", "measured", "design", "circuit", "front"),
     *("signals", "oversample", "level"),
 )
 
@@ -43,6 +43,7 @@ def test_readme_lists_every_key_of_a_design():
     table = README[README.index("## Design files") :]
     for name, section in schema["$defs"].items():
         sections = {"Input", "Front", "Tone", "Driver", "Bias", "Output", "Load", "Cabinet"}
+        sections |= {"Measured"}
         if name in sections or "Supply" in name:
             for key in section["properties"]:
                 assert f"`{key}`" in table or f"{key} =" in table, f"{name}.{key}"

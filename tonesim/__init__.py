@@ -11,7 +11,9 @@ The modules, in the order in which one may import another (never the other way r
 - `tonesim.kernel`: compiled numerical core: devices, halves, driver, rails, load, filters, front
 - `tonesim.record`: tables of a file as frozen models, errors as sentences
 - `tonesim.catalogue`: parts, their laws and the part files
+- `tonesim.measured`: measured static curves, read and judged
 - `tonesim.design`: what a design is: sections, keys, units
+- `tonesim.staticlaw`: from a measured curve to the law of each half
 - `tonesim.limits`: what its parts can bear
 - `tonesim.thermal`: junction temperatures, heat sinks, thermal runaway
 - `tonesim.designfile`: design files and presets to a checked `Design`, and back

@@ -72,7 +72,11 @@ def check_design(design: Design) -> StageCheck:
     upper = _half(circuit, idle, above, upper=True)
     lower_ = _half(circuit, idle, below, upper=False)
     least = min(abs(above.level_v), abs(below.level_v))
-    ideal = design.driver.gain
+    ideal = gain = design.driver.gain
+    if design.measured is not None and design.measured.input_v is not None:
+        gain = design.measured.table.gain
+    else:
+        gain /= 1.0 + gain / design.driver.part.dc_gain
     return StageCheck(
         title=design.title,
         design_key_sha256=design_key(design),
@@ -80,7 +84,7 @@ def check_design(design: Design) -> StageCheck:
         lower=lower_,
         output_offset_v=idle.output_v,
         ideal_gain=ideal,
-        gain=ideal / (1.0 + ideal / design.driver.part.dc_gain),
+        gain=gain,
         bench_ohm=circuit.bench_ohm,
         clean_w=least**2 / 2.0 / circuit.bench_ohm,
         draw_w=upper.draw_a * upper.rail_v + lower_.draw_a * lower_.rail_v,
@@ -100,11 +104,14 @@ def _half(circuit: Circuit, idle: OperatingPoint, clip: ClipLevel, *, upper: boo
         current, chain, draw = idle.lower_current_a, idle.lower_chain_a, idle.draw_negative_a
     held = chain_voltage(half, chain)
     base = sign * idle.drive_v + held
+    feed = half.g_feed * (rail.mean_v - base)
+    if half.measured.on:
+        feed = chain + half.measured.base_share * current if half.g_feed else 0.0
     return HalfAtRest(
         idle_a=current,
         chain_a=chain,
         chain_v=held,
-        feed_a=half.g_feed * (rail.mean_v - base),
+        feed_a=feed,
         idle_w=current * (rail.mean_v - sign * idle.output_v - half.r_emitter * current),
         rail_v=rail.mean_v,
         rail_ripple_v=rail.highest_v - rail.lowest_v,

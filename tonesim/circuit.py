@@ -12,13 +12,29 @@ from typing import NamedTuple
 import numpy as np
 import numpy.typing as npt
 
-from tonesim.catalogue import Diode, Loudspeaker, OpAmp, Transistor, saturation_current
-from tonesim.design import BatterySupply, BenchSupply, Design, Multiplier, TransformerSupply
+from tonesim.catalogue import (
+    Diode,
+    Loudspeaker,
+    OpAmp,
+    Transistor,
+    conduction,
+    saturation_current,
+)
+from tonesim.design import (
+    BatterySupply,
+    BenchSupply,
+    Design,
+    Multiplier,
+    Side,
+    TransformerSupply,
+)
 from tonesim.kernel.devices import BipolarParams
 from tonesim.kernel.driver import BLEND_V, DriverParams
 from tonesim.kernel.half import CHAIN_DROPS, CHAIN_MULTIPLIER, CHAIN_NONE, HalfParams
 from tonesim.kernel.load import LoadParams
+from tonesim.kernel.measured import MeasuredParams
 from tonesim.kernel.rails import RECTIFIED, RESISTIVE, STIFF, RailParams
+from tonesim.staticlaw import measured_halves
 from tonesim.units import T0, ZERO_CELSIUS, thermal_voltage
 
 Matrix = npt.NDArray[np.float64]
@@ -27,6 +43,8 @@ REFERENCE_C = T0 - ZERO_CELSIUS  # of all part parameters
 NO_LIMIT = 1e9  # stands for "no current limit" [A]
 _DROP_LEAK_OHM = 1e9  # a junction without a stated leak
 _LEAST_OUTPUT_OHM = 30.0  # open-loop output resistance of any op-amp
+_JUNCTION_V = 0.7  # a base-emitter junction at the current of clip
+_MOST_HEADROOM = 0.8  # of what a measured curve leaves at its end
 
 
 class Load(NamedTuple):
@@ -180,7 +198,7 @@ def lower_half(design: Design, upper: bool) -> HalfParams:
         spread, r_cb, g_be = device, 1.0, 1.0
     catch = output.catch_diode
     v_t = thermal_voltage(REFERENCE_C)
-    return HalfParams(
+    half = HalfParams(
         darlington=part.kind == "darlington",
         device=device,
         first=first,
@@ -204,6 +222,70 @@ def lower_half(design: Design, upper: bool) -> HalfParams:
         catch=BipolarParams(catch.is_a, catch.n * v_t, v_t, 1.0, 1.0, 1.0, 1.0),
         catch_r=catch.series_ohm,
     )
+    if design.measured is None:
+        return half
+    return half._replace(chain=CHAIN_NONE, chain_shift=0.0, measured=lower_measured(design, upper))
+
+
+def lower_measured(design: Design, upper: bool) -> MeasuredParams:
+    """Law of one half from the design's measured curve.
+
+    What the driver carries is not in a curve of the drive: base current comes from the pair's
+    current gain, what the feed resistor brings from the bias section. A curve of the input
+    holds all of it.
+    """
+    measured, driver = design.measured, design.driver
+    assert measured is not None
+    side: Side = "upper" if upper else "lower"
+    # The feedback network lay across the load.
+    network_ohm = driver.feedback_ohm + driver.ground_leg_ohm
+    law = measured_halves(
+        measured.table,
+        (measured.positive_v, -measured.negative_v),
+        1.0 / (1.0 / measured.load_ohm + 1.0 / network_ohm),
+        (_least_headroom(design, "upper"), _least_headroom(design, "lower")),
+        measured.idle_current_a,
+        thermal_voltage(design.output.temperature_c),
+    )[0 if upper else 1]
+    if measured.input_v is not None:
+        return law
+    feed = design.bias.feed_for(side)
+    return law._replace(
+        base_share=1.0 / (1.0 + _pair_gain(design, side, float(law.i[-1]))),
+        g_feed=1.0 / feed if feed else 0.0,
+        v_feed=_JUNCTION_V * _junctions(design, side),
+        chained=bool(design.bias.drops_for(side) or design.bias.multiplier_for(side)),
+    )
+
+
+def _pair_gain(design: Design, side: Side, current_a: float) -> float:
+    """Current gain of a half as stated, or its part's at the knee of the measured curve."""
+    measured, output = design.measured, design.output
+    assert measured is not None
+    if measured.current_gain is not None:
+        return measured.current_gain
+    point = conduction(design.part_for(side), current_a, output.temperature_c)
+    factor = output.upper_hfe_factor if side == "upper" else output.lower_hfe_factor
+    return factor * point.collector_a / point.base_a
+
+
+def _junctions(design: Design, side: Side) -> int:
+    """Base-emitter junctions between a half's base and the output."""
+    return 2 if design.part_for(side).kind == "darlington" else 1
+
+
+def _least_headroom(design: Design, side: Side) -> float:
+    """Rail minus output that a half keeps at no current, as stated or by its junctions.
+
+    A base fed from the rail cannot pass it: every base-emitter junction stays below. Driven by
+    the op-amp it can, and the first of two devices saturates: one junction stays.
+    """
+    measured = design.measured
+    assert measured is not None
+    if measured.headroom_v is not None:
+        return measured.headroom_v
+    junctions = _junctions(design, side) - (design.bias.feed_for(side) is None)
+    return min(_JUNCTION_V * junctions, _MOST_HEADROOM * measured.headroom_for(side))
 
 
 def _output_resistances(part: OpAmp) -> tuple[tuple[float, float], tuple[float, float]]:
@@ -261,17 +343,22 @@ def lower_driver(design: Design) -> DriverParams:
     """Op-amp and feedback network.
 
     The two listed swings (into 10 kilohm and 2 kilohm) give the output resistance and the
-    voltage the stage behind it stops at, for either side.
+    voltage the stage behind it stops at, for either side. Where a measured curve holds the
+    closed loop, the op-amp drives it from outside, with the loop's gain and bandwidth.
     """
     driver = design.driver
     part: OpAmp = driver.part
     (r_source, drop_positive), (r_sink, drop_negative) = _output_resistances(part)
     own = driver.positive_v is not None
+    network = driver.ground_leg_ohm + driver.feedback_ohm
+    beta, per_a0 = driver.ground_leg_ohm / network, 1.0 / part.dc_gain
+    if design.measured is not None and design.measured.input_v is not None:
+        beta, per_a0 = 0.0, 1.0 / design.measured.table.drive_gain
     return DriverParams(
         omega=2.0 * math.pi * part.gain_bandwidth_hz,
         slew=part.slew_v_per_s,
-        per_a0=1.0 / part.dc_gain,
-        beta=driver.ground_leg_ohm / (driver.ground_leg_ohm + driver.feedback_ohm),
+        per_a0=per_a0,
+        beta=beta,
         r_source=r_source,
         r_sink=r_sink,
         i_source=part.source_limit_a,

@@ -24,6 +24,8 @@ _BEYOND = 6.0  # reach of the grid past the sum of both rails [V]
 _MOST_EMITTER_DROP = 8.0  # the fine zones grow with the emitter resistors' drop up to this [V]
 _RAIL_STEP = 1 / 384_000  # step for rails at rest [s]
 FAR_V = 1e6  # input that asks for the clip level [V]
+_STEEP, _LEAST_REACH = 1 / 16, 1 / 1024  # reach of drive of a measured closed loop [V]
+_STEEP_CELLS = 512  # of one half's share of the fine zone then
 _KEPT_SURFACES = 16
 _NEAR = 0.5  # share of its current limit from which the op-amp counts as near it
 _TIE = 0.05  # share by which two limits' effects may differ and still be a tie
@@ -94,9 +96,19 @@ def grid_for(circuit: Circuit) -> Grid:
     chain = max(half.chain_r * half.g_feed for half in (circuit.upper, circuit.lower))
     u_low = _U_LOW - float(np.ceil(min(chain * span, _MOST_EMITTER_DROP)))
     single = not (circuit.upper.darlington and circuit.lower.darlington)
-    du = _DU_SINGLE if single else _DU_DARLINGTON
-    n_low = int(np.ceil((span + _BEYOND + u_low) / _DU_COARSE))
     u_high = _U_HIGH + drop
+    du_steep = 0.0
+    if circuit.upper.measured.on:
+        reach = max(float(np.max(np.abs(circuit.upper.measured.u))), _LEAST_REACH)
+        single = True
+        u_low = min(u_low, -float(np.ceil(min(reach, _MOST_EMITTER_DROP))) - 1.0)
+        u_high = max(u_high, 1.0 - u_low)
+        if reach < _STEEP:
+            # A closed loop: all of the curve lies within millivolts of drive.
+            u_high = 4.0 * 2.0 ** np.ceil(np.log2(reach))
+            u_low, du_steep = -u_high, u_high / _STEEP_CELLS
+    du = du_steep or (_DU_SINGLE if single else _DU_DARLINGTON)
+    n_low = int(np.ceil((span + _BEYOND + u_low) / _DU_COARSE))
     h_high = _H_HIGH + drop
     return Grid(
         u_low=u_low - n_low * _DU_COARSE,
@@ -141,8 +153,12 @@ def grid_axes(grid: Grid) -> tuple[Table, Table]:
 _surfaces: OrderedDict[tuple[object, ...], tuple[Table, float, int]] = OrderedDict()
 
 
-def _fingerprint(half: HalfParams, grid: Grid) -> tuple[object, ...]:
-    return tuple(v.tobytes() if isinstance(v, np.ndarray) else v for v in half) + tuple(grid)
+def fingerprint(*values: object) -> tuple[object, ...]:
+    """Every number of nested tuples and arrays, as a key."""
+    return tuple(
+        fingerprint(*v) if isinstance(v, tuple) else v.tobytes() if isinstance(v, np.ndarray) else v
+        for v in values
+    )
 
 
 def build_surface(half: HalfParams, grid: Grid) -> tuple[Table, float, int]:
@@ -162,7 +178,7 @@ def build_surface(half: HalfParams, grid: Grid) -> tuple[Table, float, int]:
     newton_steps : int
         Most steps any node needed.
     """
-    key = _fingerprint(half, grid)
+    key = fingerprint(half, grid)
     if key in _surfaces:
         _surfaces.move_to_end(key)
         return _surfaces[key]
@@ -298,7 +314,8 @@ def clip_levels(circuit: Circuit, idle: OperatingPoint) -> tuple[ClipLevel, Clip
 
     Each limit is lifted alone, and the one whose lifting lets the output go furthest is the
     cause: driver swing, driver current, base starvation (the feed resistor alone supplies the
-    base), saturation of the output device, or the supply's current limit.
+    base), saturation of the output device, or the supply's current limit. A measured curve
+    has one limit in the place of starvation and saturation: its own.
 
     Parameters
     ----------
@@ -343,6 +360,10 @@ def _clip(circuit: Circuit, idle: OperatingPoint, sign: float) -> ClipLevel:
         ),
         "saturation": level(extra=20.0),
     }
+    if circuit.upper.measured.on:
+        # What starves or saturates inside it, a measured curve does not tell.
+        lifted["measured curve"] = lifted.pop("saturation")
+        del lifted["base starvation"]
     gains = {name: max(abs(s.v_o) - reach, 0.0) for name, s in lifted.items()}
     cause = max(gains, key=lambda name: gains[name])
     swing, current = gains["driver swing"], gains["driver current"]

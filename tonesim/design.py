@@ -10,6 +10,7 @@ and `designfile.build_design` is the door that asks both.
 
 import math
 from collections.abc import Mapping
+from pathlib import Path
 from typing import Annotated, Literal
 
 from pydantic import BeforeValidator, Field, field_validator, model_validator
@@ -23,6 +24,7 @@ from tonesim.catalogue import (
     load_catalogue,
     resolve_part,
 )
+from tonesim.measured import MOST_ROWS, MeasuredTable, judge_table, read_table
 from tonesim.record import NotNegative, Number, Positive, Record
 from tonesim.units import parse_quantity
 
@@ -55,6 +57,7 @@ Shift = Annotated[Number, Field(ge=-0.1, le=0.1)]
 Position = Annotated[Number, Field(ge=0, le=1)]  # of a pot
 NetworkResistor = Annotated[Number, Field(ge=10, le=1e7)]
 NetworkCapacitor = Annotated[Number, Field(ge=1e-12, le=1e-4)]
+Volts = Annotated[tuple[float, ...], Field(max_length=MOST_ROWS)]
 
 
 class Input(Record):
@@ -433,6 +436,75 @@ class Cabinet(Record):
         return self
 
 
+class Measured(Record):
+    """Measured static curve in place of the computed halves.
+
+    `file` is a CSV table (see `measured`); after loading its rows stand in `output_v` and in
+    `drive_v` (the op-amp's output) or `input_v` (the closed loop's input), which may also be
+    written in the design itself. Rails and load are those of the measurement.
+    """
+
+    file: Annotated[str, Field(min_length=1, max_length=4000)] | None = None
+    drive_v: Volts | None = None
+    input_v: Volts | None = None
+    output_v: Volts = ()
+    positive_v: Rail
+    negative_v: NegativeRail
+    load_ohm: Annotated[Number, Field(gt=0, le=1e6)]
+    headroom_v: Annotated[Number, Field(ge=0, le=100)] | None = None
+    current_gain: Annotated[Number, Field(ge=1, le=1e6)] | None = None
+    idle_current_a: Annotated[Number, Field(ge=0, le=10)] | None = None
+
+    _fill = model_validator(mode="before")(staticmethod(_mirrored))
+
+    @model_validator(mode="before")
+    @classmethod
+    def _read(cls, data: object) -> object:
+        """Put a file's rows in the place of its path, so that the design can travel."""
+        if not isinstance(data, Mapping) or not isinstance(data.get("file"), str):
+            return data
+        for key in ("drive_v", "input_v", "output_v"):
+            if data.get(key):
+                raise ValueError(f"found both file and {key}, expected one of them")
+        table = read_table(Path(data["file"]))
+        rows = {f"{table.kind}_v": table.driven_v, "output_v": table.output_v}
+        return {**data, "file": None, **rows}
+
+    @property
+    def table(self) -> MeasuredTable:
+        """The rows, judged and ascending."""
+        if self.drive_v is not None:
+            return judge_table("drive", self.drive_v, self.output_v)
+        return judge_table("input", self.input_v or (), self.output_v)
+
+    def headroom_for(self, side: Side) -> float:
+        """Rail minus output at the last row of a half, volts."""
+        rows = self.table.output_v
+        return self.positive_v - rows[-1] if side == "upper" else rows[0] - self.negative_v
+
+    @model_validator(mode="after")
+    def _check(self) -> "Measured":
+        if (self.drive_v is None) == (self.input_v is None):
+            found = "none of" if self.drive_v is None else "both"
+            raise ValueError(f"found {found} drive_v and input_v, expected a file or one of them")
+        for side in SIDES:
+            key = "positive_v" if side == "upper" else "negative_v"
+            left = self.headroom_for(side)
+            rail = abs(self.positive_v if side == "upper" else self.negative_v)
+            if left <= 0.0:
+                raise ValueError(
+                    f"{key} is {getattr(self, key):g} V, but the table's output reaches "
+                    f"{rail - left:.4g} V towards it; expected the rail during the measurement, "
+                    "beyond all outputs"
+                )
+            if self.headroom_v is not None and self.headroom_v >= left:
+                raise ValueError(
+                    f"headroom_v is {self.headroom_v:g} V, but the table's output comes within "
+                    f"{left:.4g} V of {key}; expected less"
+                )
+        return self
+
+
 class Design(Record):
     """An output stage, its input, front end, supply, load and cabinet, every value resolved."""
 
@@ -446,6 +518,7 @@ class Design(Record):
     supply: Supply
     load: Load
     cabinet: Cabinet | None = None
+    measured: Measured | None = None
 
     def part_for(self, side: Side) -> Transistor:
         """Output transistor of a half."""

@@ -32,11 +32,14 @@ _HERE = Path(__file__).parent
 # Besides every key called part: where a name may be opened to change a value inside it.
 _NAMED_PARTS = {("output", "upper"), ("output", "lower"), ("output", "catch_diode")}
 # Keys that stand for one another: setting one takes the other away.
-_RIVALS = {
-    ("load", "ohm"): "part",
-    ("load", "part"): "ohm",
-    ("cabinet", "part"): "file",
-    ("cabinet", "file"): "part",
+_RIVALS: dict[tuple[str, str], tuple[str, ...]] = {
+    ("load", "ohm"): ("part",),
+    ("load", "part"): ("ohm",),
+    ("cabinet", "part"): ("file",),
+    ("cabinet", "file"): ("part",),
+    ("measured", "file"): ("drive_v", "input_v", "output_v"),
+    ("measured", "drive_v"): ("file", "input_v"),
+    ("measured", "input_v"): ("file", "drive_v"),
 }
 
 
@@ -91,13 +94,13 @@ def load_design(
     """
     path = _find(source)
     data = read_toml(path)
-    _place_response(data, path.resolve().parent, str(path))
+    _place_files(data, path.resolve().parent, str(path))
     where = str(path)
     if overrides:
         for override in overrides:
             _override(data, override)
         where += " as changed"
-        _place_response(data, Path.cwd(), where)
+        _place_files(data, Path.cwd(), where)
     return build_design(data, where, catalogue)
 
 
@@ -161,19 +164,22 @@ def _find(source: Path | str) -> Path:
     raise DesignError(f"{shown!r} is neither a file nor a preset; {offer}")
 
 
-def _place_response(data: Mapping[str, Any], folder: Path, where: str) -> None:
-    """Make the path of an impulse response absolute, so that the design can travel."""
-    cabinet = data.get("cabinet")
-    if not isinstance(cabinet, dict) or not isinstance(cabinet.get("file"), str):
-        return
-    try:
-        path = (folder / cabinet["file"]).resolve()
-        found = path.is_file()
-    except (OSError, ValueError):
-        path, found = folder / "?", False
-    if not found:
-        raise DesignError(f"{where}: cabinet.file is {cabinet['file']!r}, no such file in {folder}")
-    cabinet["file"] = str(path)
+def _place_files(data: Mapping[str, Any], folder: Path, where: str) -> None:
+    """Make the paths of impulse response and measured curve absolute: designs travel."""
+    for section in ("cabinet", "measured"):
+        table = data.get(section)
+        if not isinstance(table, dict) or not isinstance(table.get("file"), str):
+            continue
+        try:
+            path = (folder / table["file"]).resolve()
+            found = path.is_file()
+        except (OSError, ValueError):
+            path, found = folder / "?", False
+        if not found:
+            raise DesignError(
+                f"{where}: {section}.file is {table['file']!r}, no such file in {folder}"
+            )
+        table["file"] = str(path)
 
 
 def _override(data: dict[str, Any], text: str) -> None:
@@ -219,8 +225,8 @@ def _assign(data: dict[str, Any], key: str, value: object) -> None:
         for inner_key, inner_value in value.items():
             _assign(data, f"{key}.{inner_key}", inner_value)
         return
-    rival = _RIVALS.get((path[-1], last)) if path else None
-    if rival and value is not None:
+    rivals = _RIVALS.get((path[-1], last), ()) if path else ()
+    for rival in rivals if value is not None else ():
         table.pop(rival, None)
     if value is None:
         table.pop(last, None)
@@ -253,8 +259,9 @@ def design_key(design: Design) -> str:
         If the impulse response cannot be read.
     """
     data = design.model_dump(mode="json", exclude={"title", "notes"})
-    if design.front is None:
-        del data["front"]  # as if there were no such section: older keys stay
+    for section in ("front", "measured"):
+        if data[section] is None:
+            del data[section]  # as if there were no such section: older keys stay
     if design.cabinet and design.cabinet.file:
         try:
             content = Path(design.cabinet.file).read_bytes()

@@ -59,7 +59,8 @@ class IdleSheet:
     """A stage at rest.
 
     `driver_a` flows out of the op-amp into the chains, `trim_v` is what must be added at the
-    op-amp's input to bring the output to zero, None where 200 mV do not.
+    op-amp's input to bring the output to zero, None where 200 mV do not. What moves with
+    temperature is empty where a measured curve stands in the design: it has only its own.
     """
 
     driver_a: float
@@ -138,11 +139,13 @@ def measure_idle(bench: Bench) -> IdleSheet:
     """Idle currents over temperature, the trim of the offset and the margin to runaway."""
     design, circuit, idle = bench.design, bench.stage.circuit, bench.stage.idle
     chain = design.bias.temperature_c
+    heats = design.measured is None
+    temperatures = TEMPERATURES_C if heats else ()
     return IdleSheet(
         driver_a=idle.driver_current_a,
         driver_quiescent_a=design.driver.part.quiescent_a,
         trim_v=offset_trim(circuit, idle),
-        apart=tuple(idle_at(design, t, chain) for t in TEMPERATURES_C),
-        together=tuple(idle_at(design, t, t) for t in TEMPERATURES_C),
-        runaway=tuple(runaway_of(design, side) for side in SIDES),
+        apart=tuple(idle_at(design, t, chain) for t in temperatures),
+        together=tuple(idle_at(design, t, t) for t in temperatures),
+        runaway=tuple(runaway_of(design, side) for side in (SIDES if heats else ())),
     )

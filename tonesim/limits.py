@@ -17,6 +17,9 @@ _FREE_AIR = {"TO-92": 200, "TO-18": 300, "TO-126": 100, "TO-220": 65, "TO-3": 35
 _FREE_AIR_ELSE = 40
 _WARM_ROOM_C = 40.0
 _MAINS_TOLERANCE = 1.1
+# A measured loop's gain lies this near the driver's: two resistors of 5 %, and meters.
+_GAIN_TOLERANCE = 0.15
+_RAIL_TOLERANCE = 0.02  # rails this near those of a measured curve are the same
 
 
 class IdleEstimate(NamedTuple):
@@ -148,6 +151,8 @@ def _check_peak_current(design: Design) -> list[str]:
 
 
 def _check_idle(design: Design) -> list[str]:
+    if design.measured is not None:
+        return []
     idle = estimate_idle(design)
     faults = []
     for side in SIDES:
@@ -163,15 +168,32 @@ def _check_idle(design: Design) -> list[str]:
     return faults[:1]
 
 
+def _check_measured_gain(design: Design) -> list[str]:
+    measured, gain = design.measured, design.driver.gain
+    if measured is None or measured.input_v is None:
+        return []
+    found = measured.table.gain
+    if abs(found / gain - 1.0) <= _GAIN_TOLERANCE:
+        return []
+    return [
+        f"measured: output over input is {found:.4g} in the table, driver.feedback_ohm and "
+        f"driver.ground_leg_ohm give {gain:.4g}, expected the same within "
+        f"{100 * _GAIN_TOLERANCE:g} %"
+    ]
+
+
 _FAULTS: tuple[Callable[[Design], list[str]], ...] = (
     _check_driver_supply,
     _check_breakdown,
     _check_peak_current,
     _check_idle,
+    _check_measured_gain,
 )
 
 
 def _doubt_idle(design: Design) -> list[str]:
+    if design.measured is not None:
+        return []
     idle = estimate_idle(design)
     doubts = []
     for side in SIDES:
@@ -249,6 +271,8 @@ def _doubt_base_current(design: Design) -> list[str]:
     With a chain the feed resistor alone brings the base current; the op-amp carries what the
     other half's feed pulls through its chain. Without one the op-amp brings the base current.
     """
+    if design.measured is not None:
+        return []
     doubts = []
     factors = (design.output.upper_hfe_factor, design.output.lower_hfe_factor)
     limits = (design.driver.part.source_limit_a, design.driver.part.sink_limit_a)
@@ -299,6 +323,8 @@ def _doubt_peak_current(design: Design) -> list[str]:
 
 
 def _doubt_multiplier(design: Design) -> list[str]:
+    if design.measured is not None:
+        return []
     doubts = []
     for side in SIDES:
         multiplier, feed = design.bias.multiplier_for(side), design.bias.feed_for(side)
@@ -315,7 +341,49 @@ def _doubt_multiplier(design: Design) -> list[str]:
     return doubts
 
 
+def _doubt_measured(design: Design) -> list[str]:
+    measured = design.measured
+    if measured is None:
+        return []
+    doubts = [
+        "measured: the curve holds at the temperatures it was taken at; how the idle current moves "
+        "with heat, and whether the loop is stable, is not in it"
+    ]
+    if measured.idle_current_a is None:
+        taken = (
+            "the least that gives the curve's slope at zero output is taken"
+            if measured.input_v is None
+            else "none is taken"
+        )
+        doubts.append(
+            f"measured: a static curve does not show the idle current, {taken}; draw and heat "
+            "at rest and of quiet notes are only as good as that (measured.idle_current_a "
+            "states it)"
+        )
+    for side, rises, end in zip(SIDES[::-1], measured.table.still_rises, (0, -1), strict=True):
+        if rises:
+            doubts.append(
+                f"measured: the output still follows at {measured.table.output_v[end]:.4g} V, "
+                f"the last row of the {side} half; it is taken to clip there"
+            )
+    for side, then in zip(SIDES, (measured.positive_v, -measured.negative_v), strict=True):
+        rail = design.rail_for(side)
+        if abs(rail / then - 1.0) > _RAIL_TOLERANCE:
+            doubts.append(
+                f"measured: the {side} rail was {then:.4g} V and is {rail:.4g} V in this design; "
+                "the clip level is carried over by its headroom, the dead zone as it was"
+            )
+    if measured.input_v is not None:
+        doubts.append(
+            "measured: a static curve of the closed loop hides what the op-amp takes time for; "
+            "its way across the dead zone is missing, so crossover distortion of notes comes out "
+            "too low, and so is the way back from clip (a curve of drive_v holds the dead zone)"
+        )
+    return doubts
+
+
 _CAUTIONS: tuple[Callable[[Design], list[str]], ...] = (
+    _doubt_measured,
     _doubt_idle,
     _doubt_gain_windows,
     _doubt_driver,

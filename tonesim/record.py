@@ -69,16 +69,16 @@ class Record(BaseModel):
     model_config = ConfigDict(frozen=True, extra="forbid", allow_inf_nan=False)
 
 
-def read_toml(path: Path) -> dict[str, Any]:
-    """Read a TOML file of ours.
+def read_text(path: Path, expected: str) -> str:
+    """Read a text file of ours; `expected` says what it should have been.
 
     Raises
     ------
     DesignError
-        If the file cannot be read, is larger than 1 MB, is not UTF-8 or not TOML.
+        If the file cannot be read, is larger than 1 MB or is not UTF-8.
     """
     if path.is_dir():
-        raise DesignError(f"{path} is a folder, expected a TOML file")
+        raise DesignError(f"{path} is a folder, expected {expected}")
     try:
         with path.open("rb") as file:
             raw = file.read(_LARGEST_FILE + 1)
@@ -90,9 +90,22 @@ def read_toml(path: Path) -> dict[str, Any]:
     if len(raw) > _LARGEST_FILE:
         raise DesignError(f"{path} is larger than 1 MB, expected a text of a few kilobytes")
     try:
-        return tomllib.loads(raw.decode("utf-8-sig"))
+        return raw.decode("utf-8-sig")
     except UnicodeDecodeError as failure:
         raise DesignError(f"{path} is not UTF-8 text (byte {failure.start})") from None
+
+
+def read_toml(path: Path) -> dict[str, Any]:
+    """Read a TOML file of ours.
+
+    Raises
+    ------
+    DesignError
+        If the file cannot be read, is larger than 1 MB, is not UTF-8 or not TOML.
+    """
+    text = read_text(path, "a TOML file")
+    try:
+        return tomllib.loads(text)
     except RecursionError:
         raise DesignError(f"{path} nests its tables too deeply") from None
     except ValueError as failure:

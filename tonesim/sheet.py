@@ -110,7 +110,8 @@ def measure_sheet(
     ----------
     design : Design
     sections : sequence of str, optional
-        Names of `SECTIONS`; all of them where none is named.
+        Names of `SECTIONS`; all of them where none is named (but stability where a measured,
+        static curve stands in the design).
     ambient_c : float
         Air around the heat sinks.
     progress : callable, optional
@@ -122,6 +123,8 @@ def measure_sheet(
         If the design cannot idle.
     """
     wanted = check_sections(sections)
+    if not sections and design.measured is not None:
+        wanted = tuple(name for name in wanted if name != "stability")
     bench = Bench(design)
     total = sum(SECTIONS[name] for name in wanted)
     done = 0.0

@@ -6,7 +6,7 @@ estimate from data-sheet figures: what it assumes and what it leaves out stands 
 
 import functools
 import math
-from collections.abc import Iterable, Iterator, Sequence
+from collections.abc import Iterator, Sequence
 from dataclasses import asdict, dataclass
 from typing import Any, NamedTuple
 
@@ -14,7 +14,7 @@ import numpy as np
 import numpy.typing as npt
 
 from tonesim.circuit import Circuit, Load, load_resistance, lower
-from tonesim.curve import ClipLevel, OperatingPoint, clip_levels
+from tonesim.curve import ClipLevel, OperatingPoint, clip_levels, fingerprint
 from tonesim.design import SIDES, Design, Side
 from tonesim.errors import UsageError
 from tonesim.kernel.static import StaticPoint, solve_static
@@ -312,9 +312,8 @@ def _worst(cases: Sequence[StabilityCase]) -> StabilityCase:
 def _sides(stage: _Stage) -> tuple[Side, ...]:
     """Halves that differ: one where the stage is its own mirror image."""
     c, d = stage.circuit, stage.circuit.driver
-    pairs: Iterable[tuple[Any, Any]] = zip(c.upper, c.lower, strict=True)
     mirrored = (
-        all(np.array_equal(a, b) for a, b in pairs)
+        fingerprint(c.upper) == fingerprint(c.lower)
         and stage.ft_hz[0] == stage.ft_hz[1]
         and math.isclose(*stage.rails_v, rel_tol=1e-9)
         and (d.r_source, d.i_source, d.drop_positive) == (d.r_sink, d.i_sink, d.drop_negative)
@@ -383,10 +382,16 @@ def estimate_stability(
     Raises
     ------
     UsageError
-        If a share or a capacitance is out of its range.
+        If a share or a capacitance is out of its range, or the design has a measured curve:
+        what is quick about a loop is not in a static one.
     SolverError
         If the stage finds no idle point.
     """
+    if design.measured is not None:
+        raise UsageError(
+            f"design {design.title!r} has a measured curve, which is static and tells nothing of "
+            "stability; leave the section measured out"
+        )
     for share in shares:
         if not 0.0 < share < 1.0:
             raise UsageError(f"a share of the clip level is {share:g}, expected 0 to 1")

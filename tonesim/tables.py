@@ -145,6 +145,8 @@ def _idle(sheet: Sheet, idle: IdleSheet) -> Iterator[Table]:
             ("power from both rails", Quantity(rest.draw_w, "W")),
         ),
     )
+    if not idle.apart:
+        return
     yield Table(
         "idle",
         "idle current over temperature",

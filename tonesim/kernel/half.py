@@ -16,6 +16,12 @@ import numpy as np
 
 from tonesim.kernel.devices import BipolarParams, bipolar, exp_straight, junction
 from tonesim.kernel.jit import kernel
+from tonesim.kernel.measured import (
+    NOT_MEASURED,
+    MeasuredParams,
+    measured_current,
+    measured_drive,
+)
 
 CHAIN_NONE, CHAIN_DROPS, CHAIN_MULTIPLIER = 0, 1, 2
 
@@ -51,6 +57,7 @@ class HalfParams(NamedTuple):
     catch: BipolarParams  # catch diode (only i_s and n_vt are read)
     catch_r: float  # its series resistance, ohm
     drive_shift: float = 0.0  # battery in the drive: the half turns on that much earlier, volt
+    measured: MeasuredParams = NOT_MEASURED  # stands in for all of the above but the catch diode
 
 
 class HalfPoint(NamedTuple):
@@ -255,6 +262,10 @@ def solve_half(u, h_feed, h_collector, p, x):
     HalfPoint
     """
     u += p.drive_shift
+    if p.measured.on:
+        i, i_u = measured_current(u, h_collector, p.measured)
+        i_drive, i_drive_u = measured_drive(i, i_u, h_feed, p.measured)
+        return HalfPoint(i, i_u, i_drive, i_drive_u, 0.0, 0)
     f = np.empty(4)
     j = np.empty((4, 4))
     steps = 0
