@@ -15,8 +15,10 @@ from tonesim.cabinet import Cabinet, shape_response
 from tonesim.circuit import lower
 from tonesim.curve import build_surface, grid_for
 from tonesim.designfile import demo_audio_folder, list_presets, load_design
+from tonesim.ear import Listening
 from tonesim.front import discretise_front
 from tonesim.kernel.front import SIZE, advance_front
+from tonesim.masking import MaskingMeter
 from tonesim.oversample import Oversampler
 from tonesim.processor import Amplifier
 from tonesim.wav import open_recording
@@ -104,6 +106,23 @@ def front_row(name: str, x: np.ndarray) -> str:
     return f"{name:<28}{1e9 * took / fast.size:>8.1f} ns/step"
 
 
+def ear_row(name: str, x: np.ndarray, rate: int) -> str:
+    """Both models, and the same recording heard again at another level."""
+    test = x + 0.001 * np.sign(x)
+    meters = []
+
+    def listen() -> None:
+        meters[:] = [MaskingMeter(rate, Listening(90.0, 30.0), keep_bands=True)]
+        for k in range(0, x.size, BLOCK):
+            meters[0].add(x[k : k + BLOCK], test[k : k + BLOCK])
+        meters[0].finish()
+
+    once = seconds_for(listen)
+    again = seconds_for(lambda: meters[0].replay(-10.0))
+    seconds = x.size / rate
+    return f"{name:<28}{seconds / once:>8.1f}{seconds / again:>10.1f}"
+
+
 def against_integrator(name: str) -> str:
     """Real-time factor of the stage divided by that of IDA at comparable accuracy."""
     from conftest import make_design
@@ -137,6 +156,9 @@ def main() -> None:
         print(surface_row(name), flush=True)
     print(f"\n{'front end alone':<28}")
     print(front_row("tone-controls", x), flush=True)
+    print(f"\n{'both models of the ear':<28}{'x real':>8}{'replay':>10}")
+    for rate in (48_000, 44_100, 96_000):
+        print(ear_row(f"recording at {rate} Hz", x, rate), flush=True)
     print(f"\n{'1 kHz sine, loudspeaker':<28}{'x real':>8}{'IDA':>10}{'ratio':>10}")
     print(against_integrator("partial chain"))
 

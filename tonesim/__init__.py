@@ -40,6 +40,15 @@ The modules, in the order in which one may import another (never the other way r
 - `tonesim.wav`: recordings in, results out
 - `tonesim.level`: loudness, peak, gain
 - `tonesim.cabinet`: the cabinet as a filter
+- `tonesim.exposure`: how long a sound level may be listened to
+- `tonesim.ear`: scales, weightings, calibration and bands of the ear
+- `tonesim.framing`: recordings at any rate to frames at 48 kHz
+- `tonesim.nmr`: noise-to-mask ratio, the strict model of the ear
+- `tonesim.roex`: excitation ratio with level-dependent filters, the lenient one
+- `tonesim.masking`: reference and test through both models, frame by frame
+- `tonesim.verdict`: inaudible, borderline or audible, and by how much
+- `tonesim.audibility`: the verdict on a recording and where it shows
+- `tonesim.playback`: at which playback level the verdict turns
 - `tonesim.report`: what a render is asked for and tells, and where its files may go
 - `tonesim.render`: a recording through a design into a file
 - `tonesim.demo`: the shipped recordings through three presets, and what to listen for
