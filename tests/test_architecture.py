@@ -77,6 +77,7 @@ RANKS: dict[str, int] = {
     "tables": 16,
     "report": 12,
     "render": 13,
+    "audition": 14,
     "demo": 14,
     "show": 17,
     "cli": 18,

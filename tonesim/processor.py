@@ -5,6 +5,7 @@ allocated in `prepare`; `process` allocates nothing that grows, never raises on 
 gives the same bits however the signal is cut.
 """
 
+from collections.abc import Callable
 from dataclasses import dataclass
 
 import numpy as np
@@ -20,7 +21,7 @@ from tonesim.kernel.amplifier import advance
 from tonesim.kernel.front import advance_front
 from tonesim.oversample import Oversampler, oversampling_factor
 from tonesim.signals import Signal
-from tonesim.stage import build_stage, state_at_rest, step_params
+from tonesim.stage import Stage, build_stage, state_at_rest, step_params
 
 TOLERANCE_V = 1e-3  # a Newton step below this is the last: what is left is its square
 _WARM_UP_S = 0.1  # silence run in `prepare`, so that the stage starts at rest
@@ -61,10 +62,19 @@ class Amplifier:
         Factor on the internal rate (a power of two), for accuracy beyond the default.
     tolerance_v : float, optional
         Last Newton step that counts as settled, in volts.
+    build : callable, optional
+        Makes the stage of a design; another than its own is that of a twin (see `twin`).
     """
 
-    def __init__(self, design: Design, multiply: int = 1, tolerance_v: float = TOLERANCE_V) -> None:
+    def __init__(
+        self,
+        design: Design,
+        multiply: int = 1,
+        tolerance_v: float = TOLERANCE_V,
+        build: Callable[[Design], Stage] = build_stage,
+    ) -> None:
         self.design = design
+        self._build = build
         self.circuit: Circuit = lower(design)
         self.multiply = multiply
         self.tolerance_v = tolerance_v
@@ -90,7 +100,8 @@ class Amplifier:
         """
         self.factor = oversampling_factor(sample_rate, multiply=self.multiply)
         dt = 1.0 / (sample_rate * self.factor)
-        stage = build_stage(self.design)
+        stage = self._build(self.design)
+        self.circuit = stage.circuit
         self.surfaces, self.idle = stage.surfaces, stage.idle
         self._params = step_params(stage, dt, self.tolerance_v)
         front, gain = self.circuit.front, self.circuit.gain

@@ -42,6 +42,7 @@ from tonesim.report import (
     write_sidecar,
 )
 from tonesim.signals import Signal
+from tonesim.stage import Stage, build_stage
 from tonesim.wav import (
     Recording,
     RecordingInfo,
@@ -110,12 +111,28 @@ def output_full_scale(design: Design, response: tuple[Signal, int] | None) -> fl
     return OVERSHOOT * (rail + HEADROOM_V) * cabinet
 
 
-class _Voice:
-    """One channel: a stage and its cabinet, from samples of a recording to volts."""
+class Voice:
+    """One channel: a stage and its cabinet, from samples of a recording to volts.
 
-    def __init__(self, design: Design, rate: int, options: RenderOptions) -> None:
+    Parameters
+    ----------
+    design : Design
+    rate : int
+        Of the recording, hertz.
+    options : RenderOptions
+    build : callable, optional
+        Makes the stage of the design, or that of a twin.
+    """
+
+    def __init__(
+        self,
+        design: Design,
+        rate: int,
+        options: RenderOptions,
+        build: Callable[[Design], Stage] = build_stage,
+    ) -> None:
         self._full_scale_v = design.input.full_scale_v
-        self.stage = Amplifier(design, multiply=options.multiply)
+        self.stage = Amplifier(design, multiply=options.multiply, build=build)
         self.stage.prepare(rate, options.block_frames)
         # The cabinet begins at zero, so it gets the distance from rest, and rest itself is seen by
         # it as a steady voltage.
@@ -172,12 +189,12 @@ def perform(
         If the stage finds no idle point.
     """
     info = recording.info
-    channels = _channels(info, options)
+    channels = channels_of(info, options)
     blocks = recording.blocks(options.block_frames, options.channel)
     started = time.perf_counter()
     with ThreadPoolExecutor(channels) as pool:
         # In this thread, because what they may have to compile can be interrupted in the main one.
-        voices = [_Voice(design, info.sample_rate, options) for _ in range(channels)]
+        voices = [Voice(design, info.sample_rate, options) for _ in range(channels)]
         full_scale = options.output_full_scale_v or output_full_scale(
             design, cabinet_response(design, info.sample_rate)
         )
@@ -185,8 +202,8 @@ def perform(
         level = LevelMeter(info.sample_rate, channels)
         running = time.perf_counter()
         total, done = info.frames + voices[0].latency, 0
-        for block in itertools.chain(blocks, _silence(voices[0].latency, channels, options)):
-            columns = list(pool.map(_Voice.play, voices, np.ascontiguousarray(block.T)))
+        for block in itertools.chain(blocks, silence(voices[0].latency, channels, options)):
+            columns = list(pool.map(Voice.play, voices, np.ascontiguousarray(block.T)))
             result = np.column_stack(columns) / full_scale
             loudness.add(result)
             level.add(result)
@@ -209,7 +226,14 @@ def perform(
     )
 
 
-def _channels(info: RecordingInfo, options: RenderOptions) -> int:
+def channels_of(info: RecordingInfo, options: RenderOptions) -> int:
+    """Channels that are played: one that is chosen, or one or two.
+
+    Raises
+    ------
+    RecordingError
+        If there are more and none was chosen.
+    """
     if options.channel is not None:
         return 1
     if info.channels > _MOST_CHANNELS:
@@ -219,7 +243,8 @@ def _channels(info: RecordingInfo, options: RenderOptions) -> int:
     return info.channels
 
 
-def _silence(frames: int, channels: int, options: RenderOptions) -> Iterator[Signal]:
+def silence(frames: int, channels: int, options: RenderOptions) -> Iterator[Signal]:
+    """Blocks of silence that push out what filters delay."""
     for start in range(0, frames, options.block_frames):
         yield np.zeros((min(options.block_frames, frames - start), channels))
 
@@ -268,7 +293,7 @@ def render(
     check_output(out, [recording], design, replace=options.replace)
     with open_recording(recording, repair=options.repair) as source:
         info = source.info
-        channels = _channels(info, options)
+        channels = channels_of(info, options)
         digest = file_sha256(recording)
         with create_recording(out, info.sample_rate, channels, options.subtype) as writer:
             if options.match_lufs is None:

@@ -124,6 +124,9 @@ def linear(stage: Stage) -> Stage:
         drop_positive=0.0,
         drop_negative=0.0,
     )
+    front = circuit.front
+    if front is not None:
+        front = front._replace(clip_positive_v=_ENDLESS_V, clip_negative_v=-_ENDLESS_V)
     grid = grid_for(circuit)
     us, hs = grid_axes(grid)
     table = np.zeros((hs.size, us.size, 4))
@@ -135,6 +138,7 @@ def linear(stage: Stage) -> Stage:
         rail_positive=circuit.rail_positive._replace(kind=STIFF, v_open=_ENDLESS_V),
         rail_negative=circuit.rail_negative._replace(kind=STIFF, v_open=_ENDLESS_V),
         mains_hz=0.0,
+        front=front,
     )
     surfaces = Surfaces(grid, table, table, 0.0, 0)
     offset = driver.offset / (driver.beta + driver.per_a0)
