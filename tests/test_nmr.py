@@ -131,6 +131,16 @@ def test_steps_of_what_is_not_heard_are_never_noticed():
     assert np.all(nmr.level_difference_jnd(quiet, quieter) < 1e-28)
 
 
+@pytest.mark.parametrize(
+    ("reference_db", "test_db", "at_db"), [(80.0, 60.0, 66.0), (60.0, 80.0, 80.0)]
+)
+def test_the_step_is_taken_at_a_level_that_favours_the_louder(reference_db, test_db, at_db):
+    # 0.3 max + 0.7 of the test (BS.1387): 0.3 x 80 + 0.7 x 60 = 66 dB, and 80 dB.
+    reference, test = (np.full((1, 109), 10 ** (x / 10)) for x in (reference_db, test_db))
+    found = nmr.level_difference_jnd(reference, test)
+    np.testing.assert_allclose(found, 20.0 / nmr.level_step_db(at_db), rtol=1e-12)
+
+
 def test_a_tone_added_far_away_counts_decibel_for_decibel():
     # 1 kHz at 80 dB, 3 kHz 60, 40 and 20 dB below: 20 dB each.
     reference = tone(1000.0, 80.0)
