@@ -17,7 +17,7 @@ from tonesim.design import Design
 from tonesim.errors import SolverError
 from tonesim.harmonics import Harmonics, analyse_harmonics
 from tonesim.kernel.rails import STIFF
-from tonesim.probe import Probe, Tone
+from tonesim.probe import Probe, Solved, Tone
 from tonesim.signals import Signal, sine
 from tonesim.stage import Stage, build_stage
 
@@ -95,6 +95,18 @@ class Bench:
         return Probe(self.stage)
 
     @cached_property
+    def still_probe(self) -> Probe:
+        """The fine one on rails that stand still; for the floor of the computation."""
+        return Probe(self.stiff, _MULTIPLY)
+
+    @property
+    def solved(self) -> Solved:
+        """What the solver did so far in all runs of all these probes."""
+        names = ("probe", "fine_probe", "loudspeaker_probe", "still_probe")
+        used = [self.__dict__[name] for name in names if name in self.__dict__]
+        return sum((probe.solved_in_all for probe in used), Solved())
+
+    @cached_property
     def clip_point(self) -> Reading:
         """The sine whose lowest crest falls one per cent short of what the gain asks for.
 
@@ -102,10 +114,14 @@ class Bench:
         """
         probe = self.probe
         small = self.clip_v / self.gain / 10.0
-        linear = _crest(probe, small, self.rest.output_offset_v) / small
+
+        def crest(peak: float) -> float:
+            return _crest(probe, peak, self.rest.output_offset_v, self.record_s)
+
+        linear = crest(small) / small
 
         def short(peak: float) -> float:
-            return _crest(probe, peak, self.rest.output_offset_v) / (linear * peak) - 1.0 + _SHORT
+            return crest(peak) / (linear * peak) - 1.0 + _SHORT
 
         high = self.clip_v / self.gain
         for _ in range(8):
@@ -118,12 +134,12 @@ class Bench:
         return measure(probe.twin(), TONE_HZ, float(peak), self.record_s)
 
 
-def _crest(probe: Probe, peak_v: float, offset_v: float) -> float:
+def _crest(probe: Probe, peak_v: float, offset_v: float, seconds: float) -> float:
     """Lowest crest, of either sign, of any cycle of a sine in the steady state.
 
     Under ripple the cycles differ; the one on the lowest rail clips first.
     """
-    tone = probe.twin().tone(((TONE_HZ, peak_v),), RECORD_S)
+    tone = probe.twin().tone(((TONE_HZ, peak_v),), seconds)
     ends = np.arange(tone.cycles[0]) * tone.output_v.size // tone.cycles[0]
     y = tone.output_v - offset_v
     return float(min(np.maximum.reduceat(y, ends).min(), np.maximum.reduceat(-y, ends).min()))
@@ -212,9 +228,10 @@ def measure(probe: Probe, frequency_hz: float, peak_v: float, seconds: float) ->
     """
     tone = probe.tone(((frequency_hz, peak_v),), seconds)
     n, cycles = tone.output_v.size, tone.cycles[0]
-    before = probe.draw()
+    before, given = probe.draw(), probe.energy()
     trace = probe.trace(sine(cycles * probe.rate_hz / n, peak_v, probe.rate_hz, n))
     draw = (probe.draw() - before) * probe.rate_hz / n
+    supply = (probe.energy() - given) * probe.rate_hz / n
     circuit = probe.stage.circuit
     p, m, v = trace.positive_v, trace.negative_v, trace.output_v
 
@@ -222,7 +239,6 @@ def measure(probe: Probe, frequency_hz: float, peak_v: float, seconds: float) ->
         flowing = np.maximum(current, 0.0)
         return float(np.mean(flowing * across - ohm * flowing**2))
 
-    supply = float(np.mean(p) * draw[0] + np.mean(m) * draw[1])
     return Reading(
         frequency_hz=cycles * probe.rate_hz / n,
         input_peak_v=peak_v,

@@ -40,8 +40,9 @@ class Heat:
 class RailInBurst:
     """One rail in a burst of a sine at the clip point; magnitudes in volts.
 
-    `sagged_v` is the mean over the burst's last mains cycle, `recovery_s` the time after the
-    burst until 95 % of the sag are back, None where it is not within the record.
+    `sagged_v` is the mean over the burst's last cycle, of the mains where there is one, else of
+    the sine. `recovery_s` is the time after the burst until 95 % of the sag are back, None where
+    it is not within the record; with mains it is the mean of a whole mains cycle that is back.
     """
 
     idle_v: float
@@ -130,7 +131,9 @@ def rail_in_burst(rail_v: np.ndarray, rate_hz: float, mains_hz: float) -> RailIn
     total = np.concatenate([[0.0], np.cumsum(rail_v)])
     mean = (total[cycle:] - total[:-cycle]) / cycle  # of the cycle that begins there
     idle, sagged = float(mean[start - cycle]), float(mean[stop - cycle])
-    back = np.flatnonzero(mean[stop - cycle :] >= idle - _BACK * (idle - sagged))
+    # Only ripple needs a mean after the burst; it would hide what is quicker than a cycle.
+    after = mean[stop - cycle :] if mains_hz else rail_v[stop:]
+    back = np.flatnonzero(after >= idle - _BACK * (idle - sagged))
     recovery = None
     if idle - sagged < 1e-6 * idle:
         recovery = 0.0
@@ -161,19 +164,14 @@ def measure_power(bench: Bench, progress: Progress | None = None) -> PowerSheet:
         at_thd.append(
             None if peak is None else measure(bench.probe.twin(), TONE_HZ, peak, bench.record_s)
         )
-    probes: list[Probe] = []
-
-    def fresh(probe: Probe) -> Probe:
-        probes.append(probe.twin())
-        return probes[-1]
-
     jobs = [
-        partial(heat_at, fresh(bench.probe), TONE_HZ, clip.input_peak_v, share) for share in _SHARES
+        partial(heat_at, bench.probe.twin(), TONE_HZ, clip.input_peak_v, share) for share in _SHARES
     ]
-    speaker = bench.design.load.part is not None
-    if speaker:
+    used = [bench.probe]
+    if bench.design.load.part is not None:
+        used.append(bench.loudspeaker_probe)
         jobs += [
-            partial(heat_at, fresh(bench.loudspeaker_probe), f, clip.input_peak_v, share)
+            partial(heat_at, bench.loudspeaker_probe.twin(), f, clip.input_peak_v, share)
             for f in _hard_frequencies(bench)
             for share in (0.4, 0.6, 0.8, 1.0)
         ]
@@ -193,7 +191,7 @@ def measure_power(bench: Bench, progress: Progress | None = None) -> PowerSheet:
         ripple_idle_v=(bench.rest.upper.rail_ripple_v, bench.rest.lower.rail_ripple_v),
         hum_idle_v=hum_at_idle(bench) if mains else 0.0,
         hum_full_v=clip.harmonics.hum_v if mains else 0.0,
-        solved=sum((each.solved for each in (*probes, bench.probe)), Solved()),
+        solved=sum((probe.solved_in_all for probe in used), Solved()),
     )
 
 
