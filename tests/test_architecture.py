@@ -24,6 +24,7 @@ RANKS: dict[str, int] = {
     "kernel.half": 3,
     "kernel.surface": 3,
     "kernel.amplifier": 4,
+    "kernel.follower": 4,
     "kernel.static": 4,
     "kernel.probe": 5,
     "pool": 1,
@@ -62,6 +63,10 @@ RANKS: dict[str, int] = {
     "heat": 14,
     "sheet": 15,
     "tables": 16,
+    "paper": 12,
+    "pictures": 14,
+    "plot_sines": 15,
+    "plot": 16,
     "report": 12,
     "render": 13,
     "demo": 14,
@@ -77,7 +82,7 @@ DOORS: dict[str, set[str]] = {
     "soundfile": {"wav"},
     "sounddevice": {"live"},
     "pyloudnorm": set(),  # cannot stream; the tests hold `level` against it
-    "matplotlib": {"plot"},
+    "matplotlib": {"paper"},
     "rich": {"show"},
     "click": {"cli", "__main__"},
     "scipy": {
