@@ -27,7 +27,7 @@ from matplotlib.layout_engine import ConstrainedLayoutEngine
 from matplotlib.ticker import FuncFormatter, LogLocator, NullFormatter
 
 from tonesim import __version__
-from tonesim.errors import OutputError
+from tonesim.errors import OutputError, UsageError
 from tonesim.signals import Signal
 from tonesim.units import format_quantity
 from tonesim.wav import write_bytes_aside
@@ -57,7 +57,7 @@ FORMATS = ("svg", "png")
 CREATOR = f"tonesim {__version__}"
 WIDTH_IN = 6.7  # text width of an A4 page
 SMALLEST_PT = 9.0
-_CAPTION_LETTERS, _LEGEND_LETTERS = 100, 88  # that a line holds
+_CAPTION_LETTERS, _LEGEND_LETTERS = 95, 84  # that a line holds
 _TITLE_PT, _LINE_PT, _LEGEND_PT, _EDGE_PT = 11.0, 11.5, 15.0, 5.0
 _POINTS = 72.0  # an inch
 _SPACE_BEFORE_UNIT = re.compile(
@@ -100,6 +100,19 @@ def on_paper() -> Iterator[None]:
         matplotlib.rcdefaults()
         matplotlib.rcParams.update(_STYLE)
         yield
+
+
+def looks(count: int) -> tuple[Look, ...]:
+    """Looks of so many lines, each unlike the others.
+
+    Raises
+    ------
+    UsageError
+        If there are more lines than looks.
+    """
+    if count > len(LOOKS):
+        raise UsageError(f"{count} lines in one picture, expected {len(LOOKS)} at most")
+    return LOOKS[:count]
 
 
 # ---- sheet of paper, axes ----

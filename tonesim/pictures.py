@@ -13,7 +13,7 @@ import numpy as np
 from tonesim.bench import TONE_HZ, Bench, distortion_of
 from tonesim.circuit import Circuit, bench_load, load_resistance, lower
 from tonesim.curve import static_point
-from tonesim.design import SIDES, Design
+from tonesim.design import SIDES, Design, Side
 from tonesim.designfile import replace
 from tonesim.distortion import LEVELS_DB
 from tonesim.errors import DesignError
@@ -224,12 +224,15 @@ def neighbours(design: Design) -> tuple[tuple[str, Design], ...]:
 
 def _label(changes: Mapping[str, Any], more: bool) -> str:
     """Say in words what differs from the design as drawn."""
-    ohms = {value for value in changes.values() if isinstance(value, float)}
+    told = []
+    ohms = sorted({value for value in changes.values() if isinstance(value, float)})
     if ohms:
-        return "R1 of the multiplier " + ", ".join(format_quantity(x, "ohm") for x in sorted(ohms))
-    number = "one drop more" if more else "one drop fewer"
+        told.append("R1 of the multiplier " + ", ".join(format_quantity(x, "ohm") for x in ohms))
     sides = [side for side in SIDES if f"bias.{side}" in changes]
-    return f"{number} per half" if len(sides) == 2 else f"{number} in the {sides[0]} half"
+    if sides:
+        where = "per half" if len(sides) == 2 else f"in the {sides[0]} half"
+        told.append(f"one drop {'more' if more else 'fewer'} {where}")
+    return ", ".join(told)
 
 
 def _other_ratio(design: Design, more: bool) -> dict[str, Any]:
@@ -259,7 +262,7 @@ def _other_drops(design: Design, more: bool) -> dict[str, Any]:
     changes = {}
     for side in SIDES:
         drops = bias.drops_for(side)
-        if bias.multiplier_for(side) is not None:
+        if bias.multiplier_for(side) is not None or bias.feed_for(side) is None:
             continue
         if not more and drops:
             changes[f"bias.{side}"] = drops[:-1]
@@ -273,12 +276,13 @@ def _other_drops(design: Design, more: bool) -> dict[str, Any]:
 def describe_chain(design: Design) -> str:
     """Chains in words: "1N4148 + 2 BAT85", both halves' where they differ."""
 
-    def half(side: Any) -> str:
+    def half(side: Side) -> str:
         multiplier = design.bias.multiplier_for(side)
         if multiplier is not None:
             return f"multiplier × {multiplier.ratio:.3g}"
         names = Counter(drop.name for drop in design.bias.drops_for(side))
-        return " + ".join(f"{n} {name}" if n > 1 else name for name, n in names.items()) or "none"
+        drops = [f"{n} {name}" if n > 1 else name for name, n in names.items()]
+        return " + ".join(drops) or "no chain"
 
     upper, low = (half(side) for side in SIDES)
     return upper if upper == low else f"{upper} above, {low} below"

@@ -25,6 +25,7 @@ from tonesim.paper import (
     line,
     linear,
     logarithmic,
+    looks,
     new_figure,
     on_paper,
     quantity,
@@ -93,7 +94,7 @@ def draw_transfer(curve: Curve, clips: Sequence[ClipLevel], held: Held) -> Figur
     linear(axes.xaxis, "drive node", "V", float(np.max(np.abs(curve.drive_v))))
     linear(axes.yaxis, "output", "V", float(np.max(np.abs(curve.output_v))))
     axes.margins(y=0.12)
-    inset = axes.inset_axes((0.62, 0.27, 0.26, 0.25))
+    inset = axes.inset_axes((0.61, 0.27, 0.25, 0.25))
     line(inset, curve.drive_v, curve.output_v, _INK)
     zone = curve.dead_zone_v
     reach = 1.6 * max(-zone[0], zone[1]) if zone else _NEAR_V
@@ -101,7 +102,7 @@ def draw_transfer(curve: Curve, clips: Sequence[ClipLevel], held: Held) -> Figur
     high = max(float(np.max(np.abs(curve.output_v[near]))), 1e-3)
     inset.set(xlim=(-reach, reach), ylim=(-1.1 * high, 1.1 * high))
     linear(inset.xaxis, "drive node", "V", reach)
-    linear(inset.yaxis, "output", "V", high)
+    linear(inset.yaxis, "output", "V", 1.1 * high)
     inset.yaxis.tick_right()
     inset.yaxis.set_label_position("right")
     if zone:
@@ -123,12 +124,13 @@ def draw_gain(curves: Sequence[Curve], held: Held) -> Figure:
     figure, (whole, near) = new_figure("Small-signal gain of the output pair", 4.4, columns=2)
     first = curves[0]
     swing = float(np.max(np.abs(first.output_v)))
-    for curve, look in zip(curves, LOOKS, strict=False):
+    for curve, look in zip(curves, looks(len(curves)), strict=True):
         label = f"{curve.label}, idle {quantity(curve.idle_a, 'A')}"
         line(whole, curve.output_v, curve.gain, look, label)
         line(near, curve.output_v, curve.gain, look)
     reach = 0.3 * swing
     whole.set(ylim=(0.0, 1.02), ylabel="gain, d output / d drive (V/V)")
+    near.set_ylabel("gain (V/V)")
     whole.set_title("whole swing")
     middle = first.gain[np.abs(first.output_v) < _MIDDLE * swing]
     top = float(np.max([np.max(curve.gain) for curve in curves]))
@@ -194,11 +196,10 @@ def draw_burst(
     for near, rail, (name, volts) in zip(cells[1:], rails, sides, strict=True):
         line(whole, course.time_s, volts, thin)
         line(near, course.time_s, volts, thin)
-        sign = 1.0 if name == "positive" else -1.0
         back = "" if rail.recovery_s is None else f", back in {quantity(rail.recovery_s, 's')}"
         near.set_title(
-            f"{name} rail: mean {quantity(sign * rail.idle_v, 'V')} to "
-            f"{quantity(sign * rail.sagged_v, 'V')}{back}"
+            f"{name} rail: {quantity(rail.idle_v, 'V')}, sags by "
+            f"{quantity(rail.idle_v - rail.sagged_v, 'V')}{back}"
         )
     for axes, what in zip(cells, ("volts", "rail", "rail"), strict=True):
         linear(axes.yaxis, what, "V", rails[0].idle_v)
@@ -211,7 +212,8 @@ def draw_burst(
         axes.set_xlim(course.time_s[0], course.time_s[-1])
     fixed = (
         f"1 kHz for {quantity(burst_s, 's')} at the clip point. {as_it_comes(held)} "
-        "Rails: what is nearest to zero in each millisecond. Back: when 95 % of the sag are gone."
+        "Rails: what is nearest to zero in each millisecond. Sag: of the mean over a mains cycle; "
+        "back: when 95 % of it are gone."
     )
     return finish(figure, held.title, fixed)
 
@@ -247,7 +249,7 @@ def draw_power_up(runs: Sequence[PoweredUp], held: Held) -> Figure:
     """Rails and output while the supply comes up, with equal and with unequal parts."""
     figure, (rails, output) = new_figure("Power-up without a signal", 5.4, rows=2)
     courses = [run.supplied for run in runs]
-    for run, course, look in zip(runs, courses, LOOKS, strict=False):
+    for run, course, look in zip(runs, courses, looks(len(runs)), strict=True):
         what = "reservoirs and offset as they come" if run.unequal else "parts as drawn"
         line(rails, course.time_s, course.positive_v.low, look, what)
         line(rails, course.time_s, course.negative_v.high, look)
@@ -255,7 +257,7 @@ def draw_power_up(runs: Sequence[PoweredUp], held: Held) -> Figure:
     linear(rails.yaxis, "rails", "V", held.positive_v)
     most = max(float(np.max(np.abs(course.output_v))) for course in courses)
     linear(output.yaxis, "output", "V", most)
-    end = max(_settled_s(course) for course in courses)
+    end = max(_settled_s(course, most) for course in courses)
     for axes in (rails, output):
         linear(axes.xaxis, "time from switching on", "s", end)
         axes.set_xlim(0.0, end)
@@ -267,11 +269,13 @@ def draw_power_up(runs: Sequence[PoweredUp], held: Held) -> Figure:
     return finish(figure, held.title, fixed)
 
 
-def _settled_s(course: Supplied) -> float:
+def _settled_s(course: Supplied, output_v: float) -> float:
     """Twice the time after which rails and output stay near what they come to."""
     last = 0
-    for y in (course.positive_v.low, course.negative_v.high, larger(course.output_v)):
-        off = np.flatnonzero(np.abs(y - y[-1]) > _SETTLED * np.max(np.abs(y)))
+    rails = (course.positive_v.low, course.negative_v.high)
+    scaled = [(rail, float(np.max(np.abs(rail)))) for rail in rails]
+    for y, most in (*scaled, (larger(course.output_v), output_v)):
+        off = np.flatnonzero(np.abs(y - y[-1]) > _SETTLED * most)
         last = max(last, int(off[-1]) if off.size else 0)
     return float(min(max(2.0 * course.time_s[last], _LEAST_S), course.time_s[-1]))
 

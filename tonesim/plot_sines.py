@@ -13,6 +13,7 @@ from tonesim.paper import (
     line,
     linear,
     logarithmic,
+    looks,
     mark,
     minus,
     new_figure,
@@ -27,8 +28,9 @@ from tonesim.pictures import SPECTRUM_HZ, Crossing, Held, Spectrum, as_it_comes,
 from tonesim.signals import Signal
 
 _INK, _SECOND, _THIRD, _FOURTH = LOOKS
-_LEAST_PERCENT = 1e-7  # distortion below this is not drawn
+_LEAST_PERCENT = 1e-9  # distortion below this is not drawn
 _LOWEST_DB = -150.0
+_MOST_TIMES = 100_000.0  # beyond it a residual shows the steps of the tables
 
 
 @on_paper()
@@ -49,18 +51,19 @@ def draw_crossings(crossings: Sequence[Crossing], held: Held) -> Figure:
         linear(axes.yaxis, "output", "V", high)
     fixed = (
         f"Sines {level(crossings[0].level_db)} from the clip point; residual: output without "
-        f"its fundamental and mean. {at_idle(held)}"
+        f"its fundamental and mean, × {plain(_MOST_TIMES, 6)} at most. {at_idle(held)}"
     )
     return finish(figure, held.title, fixed)
 
 
 def residual_scale(high_v: float, residual_v: float) -> float:
-    """Factor 1, 2 or 5 times a power of ten that shows a residual at half the height at most."""
-    if residual_v <= 1e-9 * high_v:
-        return 1.0
-    wanted = 0.55 * high_v / residual_v
+    """Factor 1, 2 or 5 times a power of ten that shows a residual at about half the height.
+
+    100 000 at most, where the computation's own steps would begin to show.
+    """
+    wanted = 0.55 * high_v / max(residual_v, 0.55 * high_v / _MOST_TIMES)
     decade = 10.0 ** np.floor(np.log10(wanted))
-    return float(max(m * decade for m in (1.0, 2.0, 5.0) if m * decade <= wanted))
+    return float(max(m * decade for m in (1.0, 2.0, 5.0) if m * decade <= wanted * (1.0 + 1e-9)))
 
 
 @on_paper()
@@ -89,7 +92,7 @@ def draw_thd_frequency(sheet: DistortionSheet, held: Held) -> Figure:
     """Distortion against frequency, a line for each level."""
     figure, (axes,) = new_figure("Distortion against frequency", 4.4)
     drawn = []
-    for points, look in zip(sheet.by_frequency, LOOKS, strict=False):
+    for points, look in zip(sheet.by_frequency, looks(len(sheet.by_frequency)), strict=True):
         middle = min(points, key=lambda point: abs(np.log(point.frequency_hz / 1000.0)))
         x = np.array([point.frequency_hz for point in points])
         drawn.append(_percent(points))
