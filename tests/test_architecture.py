@@ -167,7 +167,8 @@ def test_no_module_is_a_junk_drawer():
 def test_heavy_libraries_wait_until_they_are_needed():
     code = (
         "import sys, tonesim.cli; "
-        "print(*sorted({'numpy', 'numba', 'scipy', 'pydantic', 'soundfile', 'rich'}"
+        "print(*sorted({'numpy', 'numba', 'scipy', 'pydantic', 'soundfile', 'rich',"
+        " 'matplotlib'}"
         " & set(sys.modules)))"
     )
     done = subprocess.run([sys.executable, "-c", code], capture_output=True, text=True, check=True)

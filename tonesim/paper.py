@@ -147,7 +147,7 @@ def finish(figure: Figure, design: str, fixed: str) -> Figure:
     """
     title = "".join(letter if letter.isprintable() else " " for letter in design)
     caption = _SPACE_BEFORE_UNIT.sub("\u00a0", f"{title}. {fixed}")
-    caption = textwrap.fill(caption, _CAPTION_LETTERS)
+    caption = textwrap.fill(caption, _CAPTION_LETTERS, break_on_hyphens=False)
     width, height = (_POINTS * inches for inches in figure.get_size_inches())
     figure.text(_EDGE_PT / width, _EDGE_PT / height, caption, size=SMALLEST_PT, va="bottom")
     below = _EDGE_PT + _LINE_PT * (caption.count("\n") + 1.5)
