@@ -12,7 +12,7 @@ import numpy as np
 
 from tonesim.bench import TONE_HZ, Bench, distortion_of
 from tonesim.circuit import Circuit, bench_load, load_resistance, lower
-from tonesim.curve import static_point
+from tonesim.curve import FAR_V, static_point
 from tonesim.design import SIDES, Design, Side
 from tonesim.designfile import replace
 from tonesim.distortion import LEVELS_DB
@@ -30,7 +30,6 @@ CROSSING_DB = LEVELS_DB[1]  # relative to the clip point: low enough for the cro
 SPECTRUM_DB = LEVELS_DB[:2]
 SPECTRUM_HZ = 20_000.0  # a spectrum is drawn up to here
 DEAD = 0.5  # share of the largest gain below which a zone counts as dead
-_FAR = 1e6  # input that asks for the clip level [V]
 _NEAR_V = 3.0  # of the drive node: devices turn on inside
 _FINE_V, _COARSE_V = 1 / 128, 1 / 32
 _PER_CYCLE = 2048
@@ -183,7 +182,7 @@ def transfer_curve(
         Drive in steps of 1/128 V where devices turn on, of 1/32 V elsewhere.
     """
     p, n = positive_v, -negative_v
-    low, high = (static_point(circuit, sign * _FAR, p, n).v_d for sign in (-1.0, 1.0))
+    low, high = (static_point(circuit, sign * FAR_V, p, n).v_d for sign in (-1.0, 1.0))
     v = _FINE_V * np.arange(np.floor(low / _FINE_V) + 1.0, np.ceil(high / _FINE_V))
     steps = round(_COARSE_V / _FINE_V)
     v = v[(np.abs(v) < _NEAR_V) | (np.rint(v / _FINE_V) % steps == 0.0)]

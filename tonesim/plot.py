@@ -12,7 +12,6 @@ import numpy as np
 
 from tonesim.bench import Bench
 from tonesim.curve import ClipLevel
-from tonesim.distortion import DistortionSheet
 from tonesim.errors import OutputError
 from tonesim.idle import IdleAt, IdleSheet
 from tonesim.paper import (
@@ -55,9 +54,10 @@ from tonesim.pictures import (
 )
 from tonesim.plot_sines import draw_crossings, draw_spectra, draw_thd_frequency, draw_thd_level
 from tonesim.pool import Progress
-from tonesim.power import PowerSheet, RailInBurst
+from tonesim.power import RailInBurst
+from tonesim.sheet import Sheet
 from tonesim.signals import Signal
-from tonesim.transient import SQUARE_SHARES, SquareReading, TransientSheet
+from tonesim.transient import SQUARE_SHARES, SquareSheet
 
 _INK, _SECOND = LOOKS[:2]
 _NEAR_V = 1.0  # drive shown around zero where there is no dead zone
@@ -219,13 +219,11 @@ def draw_burst(
 
 
 @on_paper()
-def draw_squares(
-    squares: Sequence[Square], readings: Sequence[SquareReading], square_hz: float, held: Held
-) -> Figure:
+def draw_squares(squares: Sequence[Square], sheet: SquareSheet, held: Held) -> Figure:
     """Output and drive node with a square wave: a period, and its rising edge magnified."""
     count = len(squares)
     figure, cells = new_figure("Square wave", 2.9 * count + 0.8, rows=count, columns=2)
-    for k, (found, reading) in enumerate(zip(squares, readings, strict=True)):
+    for k, (found, reading) in enumerate(zip(squares, sheet.readings, strict=True)):
         whole, edge = cells[2 * k : 2 * k + 2]
         for axes in (whole, edge):
             line(axes, found.time_s, found.drive_v, _SECOND, "drive node (op-amp's output)")
@@ -240,7 +238,7 @@ def draw_squares(
         edge.set_title(
             f"rise {quantity(reading.rise_s, 's')}, overshoot {100.0 * reading.overshoot:.1f} %"
         )
-    fixed = f"{quantity(square_hz, 'Hz')}, {at_idle(held)}"
+    fixed = f"{quantity(sheet.square_hz, 'Hz')}, {at_idle(held)}"
     return finish(figure, held.title, fixed)
 
 
@@ -289,78 +287,81 @@ def larger(course: Course) -> Signal:
 
 
 def draw_pictures(
-    bench: Bench,
-    folder: Path,
-    *,
-    idle: IdleSheet | None = None,
-    power: PowerSheet | None = None,
-    distortion: DistortionSheet | None = None,
-    transient: TransientSheet | None = None,
-    progress: Progress | None = None,
+    bench: Bench, sheet: Sheet, folder: Path, progress: Progress | None = None
 ) -> tuple[Path, ...]:
-    """Draw every picture the given sections allow, as SVG and PNG.
+    """Draw every picture the sections of a sheet allow, as SVG and PNG.
 
     The static curves need no section and are always drawn. A section that was not measured has
-    no pictures: `idle` brings idle against temperature, `distortion` both sweeps, the zero
-    crossings and the spectra, `power` the burst, `transient` square waves and power-up. What a
-    sheet holds is not measured again; traces and records, which no sheet keeps, are run here.
+    no pictures: `idle` brings idle against temperature, `power` the burst, `distortion` both
+    sweeps, the zero crossings and the spectra, `square` and `power_up` their traces. What a sheet
+    holds is not measured again; traces and records, which no sheet keeps, are run here.
 
     Parameters
     ----------
     bench : Bench
+    sheet : Sheet
+        Measured on the same bench.
     folder : Path
         Made if it is missing. Pictures of ours in it are replaced, other files left alone.
-    idle, power, distortion, transient : optional
-        Sections of the sheet of the same bench.
     progress : callable, optional
 
     Returns
     -------
     tuple of Path
-        The files written, in the order of the sheet.
+        The files written.
 
     Raises
     ------
     OutputError
         If the folder cannot be made or written to, or a file of other origin is in the way.
     """
+    return _write(folder, {**_static(bench, sheet), **_moving(bench, sheet)}, progress)
+
+
+Jobs = dict[str, Callable[[], Figure]]  # names of files, and what draws them
+
+
+def _static(bench: Bench, sheet: Sheet) -> Jobs:
     held = held_of(bench)
-    jobs: dict[str, Callable[[], Figure]] = {}
     curves = gain_curves(bench)
     clips = (bench.rest.upper.clip, bench.rest.lower.clip)
-    jobs["transfer-curve"] = lambda: draw_transfer(curves[0], clips, held)
-    jobs["small-signal-gain"] = lambda: draw_gain(curves, held)
-    if idle is not None:
+    jobs: Jobs = {
+        "transfer-curve": lambda: draw_transfer(curves[0], clips, held),
+        "small-signal-gain": lambda: draw_gain(curves, held),
+    }
+    if (idle := sheet.idle) is not None:
         chain_c = bench.design.bias.temperature_c
         jobs["idle-against-temperature"] = lambda: draw_idle(idle, chain_c, held)
-    if power is not None:
+    return jobs
+
+
+def _moving(bench: Bench, sheet: Sheet) -> Jobs:
+    held = held_of(bench)
+    jobs: Jobs = {}
+    if (power := sheet.power) is not None:
         rails = (power.positive_burst, power.negative_burst)
         jobs["rails-in-burst"] = lambda: draw_burst(burst_course(bench), rails, power.burst_s, held)
-    if distortion is not None:
+    if (distortion := sheet.distortion) is not None:
         jobs["thd-against-level"] = lambda: draw_thd_level(distortion, held)
         jobs["thd-against-frequency"] = lambda: draw_thd_frequency(distortion, held)
         jobs["zero-crossing"] = lambda: draw_crossings(
-            [zero_crossing(bench, f) for f in CROSSING_HZ], held
+            [zero_crossing(bench, frequency) for frequency in CROSSING_HZ], held
         )
         jobs["spectrum"] = lambda: draw_spectra(
-            [line_spectrum(bench, each) for each in SPECTRUM_DB], held
+            [line_spectrum(bench, level_db) for level_db in SPECTRUM_DB], held
         )
-    if transient is not None:
+    if (square := sheet.square) is not None:
         jobs["square-wave"] = lambda: draw_squares(
-            [square_course(bench, share) for share in SQUARE_SHARES],
-            transient.squares,
-            transient.square_hz,
-            held,
+            [square_course(bench, share) for share in SQUARE_SHARES], square, held
         )
+    if sheet.power_up is not None:
         jobs["power-up"] = lambda: draw_power_up(
             [power_up_course(bench, unequal=unequal) for unequal in (False, True)], held
         )
-    return _write(folder, jobs, progress)
+    return jobs
 
 
-def _write(
-    folder: Path, jobs: dict[str, Callable[[], Figure]], progress: Progress | None
-) -> tuple[Path, ...]:
+def _write(folder: Path, jobs: Jobs, progress: Progress | None) -> tuple[Path, ...]:
     """Draw and write in turn; nothing is drawn if a file of other origin is in the way."""
     try:
         folder.mkdir(parents=True, exist_ok=True)
