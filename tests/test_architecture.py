@@ -26,6 +26,7 @@ RANKS: dict[str, int] = {
     "kernel.half": 3,
     "kernel.surface": 3,
     "kernel.amplifier": 4,
+    "kernel.follower": 4,
     "kernel.static": 4,
     "kernel.probe": 5,
     "pool": 1,
@@ -75,6 +76,10 @@ RANKS: dict[str, int] = {
     "heat": 14,
     "sheet": 15,
     "tables": 16,
+    "paper": 12,
+    "pictures": 14,
+    "plot_sines": 15,
+    "plot": 16,
     "report": 12,
     "render": 13,
     "audition": 14,
@@ -91,7 +96,7 @@ DOORS: dict[str, set[str]] = {
     "soundfile": {"wav"},
     "sounddevice": {"live"},
     "pyloudnorm": set(),  # cannot stream; the tests hold `level` against it
-    "matplotlib": {"plot"},
+    "matplotlib": {"paper"},
     "rich": {"show"},
     "click": {"cli", "__main__"},
     "scipy": {
@@ -177,7 +182,8 @@ def test_no_module_is_a_junk_drawer():
 def test_heavy_libraries_wait_until_they_are_needed():
     code = (
         "import sys, tonesim.cli; "
-        "print(*sorted({'numpy', 'numba', 'scipy', 'pydantic', 'soundfile', 'rich'}"
+        "print(*sorted({'numpy', 'numba', 'scipy', 'pydantic', 'soundfile', 'rich',"
+        " 'matplotlib'}"
         " & set(sys.modules)))"
     )
     done = subprocess.run([sys.executable, "-c", code], capture_output=True, text=True, check=True)

@@ -34,6 +34,10 @@ The modules, in the order in which one may import another (never the other way r
 - `tonesim.distortion`: distortion against level and frequency, and with two tones
 - `tonesim.transient`: square wave and power-up
 - `tonesim.heat`: heat sinks, and whether idle settles on them
+- `tonesim.paper`: settings, looks, axes and files of pictures
+- `tonesim.pictures`: curves and courses that pictures show and no sheet keeps
+- `tonesim.plot_sines`: pictures of sines
+- `tonesim.plot`: pictures of a design on the bench
 - `tonesim.stability`: how near the loop of a design is to oscillation; output impedance
 - `tonesim.oversample`: up to the internal rate and down again
 - `tonesim.processor`: the stage as a processor of blocks, `Amplifier`

@@ -15,7 +15,7 @@ from tonesim.signals import burst
 THD_LEVELS = (0.01, 0.1)  # of the power ratings
 _MOST_OVERDRIVE = 4.0  # times the clip point
 _SHARES = (0.2, 0.35, 0.5, 0.6, 0.7, 0.8, 0.9, 1.0)  # of the clip point, for the heat
-_BURST_S = (0.1, 0.3, 0.6)  # silence, sine, silence
+BURST_S = (0.1, 0.3, 0.6)  # silence, sine, silence
 _BACK = 0.05  # of the sag that may be left when a rail counts as recovered
 _LONG_S = 0.5
 _RESONANCE_HZ = (20.0, 300.0)  # where a loudspeaker's resonance is looked for
@@ -117,7 +117,7 @@ def heat_at(probe: Probe, frequency_hz: float, peak_v: float, share: float) -> H
 def burst_trace(bench: Bench) -> Trace:
     """Trace of silence, a 1 kHz sine at the clip point, and silence, resistor connected."""
     probe = bench.probe.twin()
-    before, on, after = (probe.frames(seconds) for seconds in _BURST_S)
+    before, on, after = (probe.frames(seconds) for seconds in BURST_S)
     peak = bench.clip_point.input_peak_v
     return probe.trace(
         burst(TONE_HZ, peak, probe.rate_hz, before + on + after, before, before + on)
@@ -126,7 +126,7 @@ def burst_trace(bench: Bench) -> Trace:
 
 def rail_in_burst(rail_v: np.ndarray, rate_hz: float, mains_hz: float) -> RailInBurst:
     """Read a rail's voltage (frames,) off a burst trace."""
-    start, stop = (round(seconds * rate_hz) for seconds in np.cumsum(_BURST_S[:2]))
+    start, stop = (round(seconds * rate_hz) for seconds in np.cumsum(BURST_S[:2]))
     cycle = round(rate_hz / mains_hz) if mains_hz else round(rate_hz / TONE_HZ)
     total = np.concatenate([[0.0], np.cumsum(rail_v)])
     mean = (total[cycle:] - total[:-cycle]) / cycle  # of the cycle that begins there
@@ -185,7 +185,7 @@ def measure_power(bench: Bench, progress: Progress | None = None) -> PowerSheet:
         at_thd=tuple(at_thd),
         heat=tuple(found[: len(_SHARES)]),
         loudspeaker_heat=tuple(found[len(_SHARES) :]),
-        burst_s=_BURST_S[1],
+        burst_s=BURST_S[1],
         positive_burst=rail_in_burst(trace.positive_v, rate, mains),
         negative_burst=rail_in_burst(trace.negative_v, rate, mains),
         ripple_idle_v=(bench.rest.upper.rail_ripple_v, bench.rest.lower.rail_ripple_v),

@@ -480,8 +480,8 @@ class Writer:
                 file.write(bytes(4))
 
 
-def write_text_aside(path: str | os.PathLike[str], text: str) -> None:
-    """Write UTF-8 text under a temporary name and rename it.
+def write_bytes_aside(path: str | os.PathLike[str], data: bytes) -> None:
+    """Write bytes under a temporary name and rename it.
 
     Raises
     ------
@@ -490,9 +490,14 @@ def write_text_aside(path: str | os.PathLike[str], text: str) -> None:
     """
     with _aside(Path(path)) as aside:
         try:
-            aside.write_text(text, encoding="utf-8", newline="\n")
+            aside.write_bytes(data)
         except OSError as error:
             raise OutputError(f"{path} cannot be written: {error.strerror}") from None
+
+
+def write_text_aside(path: str | os.PathLike[str], text: str) -> None:
+    """Write UTF-8 text under a temporary name and rename it; raises like `write_bytes_aside`."""
+    write_bytes_aside(path, text.encode("utf-8"))
 
 
 @contextmanager
