@@ -40,6 +40,7 @@ RANKS: dict[str, int] = {
     "limits": 7,
     "thermal": 7,
     "designfile": 8,
+    "tolerance": 9,
     "circuit": 8,
     "loop": 8,
     "margins": 8,
@@ -74,6 +75,8 @@ RANKS: dict[str, int] = {
     "transient": 13,
     "clipping": 13,
     "heat": 14,
+    "figures": 13,
+    "spread": 14,
     "sheet": 15,
     "tables": 16,
     "paper": 12,
@@ -85,8 +88,9 @@ RANKS: dict[str, int] = {
     "audition": 14,
     "demo": 14,
     "show": 17,
-    "cli": 18,
-    "__main__": 19,
+    "showspread": 18,
+    "cli": 19,
+    "__main__": 20,
 }
 # Which modules may import a library; "kernel" stands for everything in that folder.
 DOORS: dict[str, set[str]] = {
@@ -113,6 +117,7 @@ DOORS: dict[str, set[str]] = {
         "power",
         "response",
         "staticlaw",
+        "spread",
         "thermal",
         "twin",
     },

@@ -18,6 +18,7 @@ The modules, in the order in which one may import another (never the other way r
 - `tonesim.thermal`: junction temperatures, heat sinks, thermal runaway
 - `tonesim.designfile`: design files and presets to a checked `Design`, and back
 - `tonesim.circuit`: a design to bare numbers
+- `tonesim.tolerance`: which values of parts differ from build to build, and one such build
 - `tonesim.loop`: a feedback loop in small signals: op-amp poles, linear networks
 - `tonesim.margins`: margins, poles and verdict of a loop
 - `tonesim.curve`: transfer surfaces, idle point, clip levels
@@ -38,6 +39,8 @@ The modules, in the order in which one may import another (never the other way r
 - `tonesim.pictures`: curves and courses that pictures show and no sheet keeps
 - `tonesim.plot_sines`: pictures of sines
 - `tonesim.plot`: pictures of a design on the bench
+- `tonesim.figures`: a few figures of one build, fast
+- `tonesim.spread`: many builds from parts within their tolerances
 - `tonesim.stability`: how near the loop of a design is to oscillation; output impedance
 - `tonesim.oversample`: up to the internal rate and down again
 - `tonesim.processor`: the stage as a processor of blocks, `Amplifier`
@@ -57,6 +60,7 @@ The modules, in the order in which one may import another (never the other way r
 - `tonesim.render`: a recording through a design into a file
 - `tonesim.demo`: the shipped recordings through three presets, and what to listen for
 - `tonesim.show`: text on the terminal
+- `tonesim.showspread`: the spread of many builds on the terminal
 - `tonesim.cli`: the command line
 
 Nothing is imported here, so that the command line answers at once.
