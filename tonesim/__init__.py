@@ -14,6 +14,7 @@ The modules, in the order in which one may import another (never the other way r
 - `tonesim.measured`: measured static curves, read and judged
 - `tonesim.design`: what a design is: sections, keys, units
 - `tonesim.staticlaw`: from a measured curve to the law of each half
+- `tonesim.readings`: a builder's measured figures, read
 - `tonesim.limits`: what its parts can bear
 - `tonesim.thermal`: junction temperatures, heat sinks, thermal runaway
 - `tonesim.designfile`: design files and presets to a checked `Design`, and back
@@ -22,6 +23,8 @@ The modules, in the order in which one may import another (never the other way r
 - `tonesim.loop`: a feedback loop in small signals: op-amp poles, linear networks
 - `tonesim.margins`: margins, poles and verdict of a loop
 - `tonesim.curve`: transfer surfaces, idle point, clip levels
+- `tonesim.tolerances`: what parts come with, each spread as a change of a design
+- `tonesim.explanation`: the tolerance at which a computed figure meets a measured one
 - `tonesim.front`: gain stage, tone network and volume in numbers
 - `tonesim.smallsignal`: the stage around an operating point, with the charge of its devices
 - `tonesim.stage`: a design made ready to run
@@ -34,6 +37,8 @@ The modules, in the order in which one may import another (never the other way r
 - `tonesim.power`: power, rails and heat
 - `tonesim.distortion`: distortion against level and frequency, and with two tones
 - `tonesim.transient`: square wave and power-up
+- `tonesim.variants`: a design with one tolerance moved, and what its meters read then
+- `tonesim.against`: measured figures beside computed ones, explained
 - `tonesim.heat`: heat sinks, and whether idle settles on them
 - `tonesim.paper`: settings, looks, axes and files of pictures
 - `tonesim.pictures`: curves and courses that pictures show and no sheet keeps

@@ -360,7 +360,7 @@ def _check_text_output(path: str, inputs: Sequence[str | None]) -> None:
 
 @commands.command(
     epilog="\b\nExamples:\n  tonesim bench no-chain\n  tonesim bench full-chain idle heat "
-    "--set output.emitter_ohm=0R47"
+    "--set output.emitter_ohm=0R47\n  tonesim bench full-chain against --against mine.csv"
 )
 @click.argument("source", metavar="DESIGN")
 @click.argument("sections", metavar="[SECTION]...", nargs=-1)
@@ -369,6 +369,12 @@ def _check_text_output(path: str, inputs: Sequence[str | None]) -> None:
     "--ambient", metavar="CELSIUS", default="40", help="Air around the heat sinks; 40 by default."
 )
 @click.option("--csv", "csv_file", metavar="FILE", help="Write every figure, a line each.")
+@click.option(
+    "--against",
+    "against_file",
+    metavar="FILE",
+    help="Put figures you measured beside the computed ones (CSV).",
+)
 @click.option("--pictures", metavar="FOLDER", help="Draw curves and waveforms, SVG and PNG.")
 @_as_json
 def bench(
@@ -378,6 +384,7 @@ def bench(
     parts_file: str | None,
     ambient: str,
     csv_file: str | None,
+    against_file: str | None,
     pictures: str | None,
     as_json: bool,
 ) -> None:
@@ -387,10 +394,15 @@ def bench(
     measures. SECTION picks parts of it: idle, gain, clip, power, heat, distortion, square,
     stability, power-up. Levels are rms unless called peak; a loudspeaker is replaced by its rated
     resistance except where it is named.
+
+    With --against the section "against" comes last: each figure of your file beside the computed
+    one, and the tolerance of a part that would explain the difference. Name it to see it alone.
     """
+    from tonesim.readings import read_readings
     from tonesim.sheet import check_sections, measure_sheet
 
-    check_sections(sections)
+    check_sections(sections, against=against_file is not None)
+    readings = None if against_file is None else read_readings(Path(against_file))
     air = _quantity("--ambient", ambient, "°C")
     if not LEAST_AMBIENT_C <= air <= MOST_AMBIENT_C:
         raise UsageError(
@@ -404,7 +416,7 @@ def bench(
     from tonesim.tables import tables, to_csv
 
     with progress_bars(1000) as begin:
-        _bench, sheet = measure_sheet(design, sections, air, begin("bench", 1000))
+        _bench, sheet = measure_sheet(design, sections, air, begin("bench", 1000), readings)
     if csv_file is not None:
         from tonesim.wav import write_text_aside
 

@@ -8,7 +8,7 @@ class TonesimError(Exception):
 
 
 class DesignError(TonesimError):
-    """A design file, a part or a value in them cannot be used."""
+    """A design file, a part, a measured table or a value in them cannot be used."""
 
     exit_code = 11
 

@@ -4,8 +4,10 @@ import dataclasses
 import math
 from collections.abc import Callable, Sequence
 from dataclasses import dataclass
+from functools import partial
 from typing import Any
 
+from tonesim.against import Against, measure_against
 from tonesim.bench import Bench
 from tonesim.check import StageCheck
 from tonesim.clipping import ClipSheet, measure_clip
@@ -16,6 +18,7 @@ from tonesim.heat import AMBIENT_C, HeatSheet, measure_heat
 from tonesim.idle import IdleSheet, measure_idle
 from tonesim.pool import Progress
 from tonesim.power import PowerSheet, measure_power
+from tonesim.readings import Readings
 from tonesim.response import GainSheet, measure_gain
 from tonesim.stability import Stability, estimate_stability
 from tonesim.transient import PowerUpSheet, SquareSheet, measure_power_up, measure_squares
@@ -32,6 +35,8 @@ SECTIONS = {
     "stability": 0.03,
     "power-up": 0.05,
 }
+AGAINST = "against"  # a section of its own where a file of measured figures is given
+_AGAINST_TIME = 0.3
 
 
 @dataclass(frozen=True)
@@ -56,6 +61,7 @@ class Sheet:
     stability: Stability | None
     power_up: PowerUpSheet | None
     unsettled_steps: int
+    against: Against | None = None
 
     def as_dict(self) -> dict[str, Any]:
         """Everything as plain values for JSON; what was not measured is left out."""
@@ -84,18 +90,24 @@ def _plain(value: object) -> Any:
     return value
 
 
-def check_sections(names: Sequence[str]) -> tuple[str, ...]:
+def check_sections(names: Sequence[str], *, against: bool = False) -> tuple[str, ...]:
     """Sections asked for, in the order of the bench; all of them where none is named.
+
+    `against` says that there are measured figures: their section comes last, whatever is named,
+    and may be named to stand alone.
 
     Raises
     ------
     UsageError
         If a name is not known.
     """
+    known = (*SECTIONS, *([AGAINST] if against else []))
     for name in names:
-        if name not in SECTIONS:
-            raise UsageError(f"no section is called {name!r}, expected {', '.join(SECTIONS)}")
-    return tuple(name for name in SECTIONS if name in names or not names)
+        if name == AGAINST and not against:
+            raise UsageError(f"the section {AGAINST} needs --against FILE")
+        if name not in known:
+            raise UsageError(f"no section is called {name!r}, expected {', '.join(known)}")
+    return tuple(name for name in known if name in names or name == AGAINST or not names)
 
 
 def measure_sheet(
@@ -103,6 +115,7 @@ def measure_sheet(
     sections: Sequence[str] = (),
     ambient_c: float = AMBIENT_C,
     progress: Progress | None = None,
+    readings: Readings | None = None,
 ) -> tuple[Bench, Sheet]:
     """Put a design on the bench and measure the sections asked for.
 
@@ -116,17 +129,20 @@ def measure_sheet(
         Air around the heat sinks.
     progress : callable, optional
         Takes the share that is done, 0 to 1; may raise to stop.
+    readings : Readings, optional
+        Measured figures, put beside the computed ones in a section of their own.
 
     Raises
     ------
     SolverError
         If the design cannot idle.
     """
-    wanted = check_sections(sections)
+    wanted = check_sections(sections, against=readings is not None)
     if not sections and design.measured is not None:
         wanted = tuple(name for name in wanted if name != "stability")
     bench = Bench(design)
-    total = sum(SECTIONS[name] for name in wanted)
+    times = {**SECTIONS, AGAINST: _AGAINST_TIME}
+    total = sum(times[name] for name in wanted)
     done = 0.0
 
     def begin(name: str) -> Progress:
@@ -134,7 +150,7 @@ def measure_sheet(
 
         def tell(share: float) -> None:
             if progress is not None:
-                progress(min((start + share * SECTIONS[name]) / total, 1.0))
+                progress(min((start + share * times[name]) / total, 1.0))
 
         tell(0.0)
         return tell
@@ -153,9 +169,11 @@ def measure_sheet(
         "stability": lambda _: estimate_stability(design),
         "power-up": lambda _: measure_power_up(bench),
     }
+    if readings is not None:
+        steps[AGAINST] = partial(measure_against, bench, readings)
     for name in wanted:
         found[name] = steps[name](begin(name))
-        done += SECTIONS[name]
+        done += times[name]
     if progress is not None:
         progress(1.0)
     return bench, _sheet(bench, found)
@@ -171,5 +189,5 @@ def _sheet(bench: Bench, found: dict[str, Any]) -> Sheet:
         bench_ohm=bench.ohm,
         rest=bench.rest,
         unsettled_steps=unsettled,
-        **{name.replace("-", "_"): found.get(name) for name in SECTIONS},
+        **{name.replace("-", "_"): found.get(name) for name in (*SECTIONS, AGAINST)},
     )

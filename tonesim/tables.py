@@ -10,9 +10,11 @@ from collections.abc import Callable, Iterator, Sequence
 from dataclasses import dataclass
 from typing import NamedTuple
 
+from tonesim.against import Against
 from tonesim.bench import Reading
 from tonesim.clipping import ClipSheet, HalfClip
 from tonesim.distortion import DistortionPoint, DistortionSheet
+from tonesim.explanation import Comparison
 from tonesim.heat import Cooling, HeatSheet
 from tonesim.idle import IdleSheet
 from tonesim.power import THD_LEVELS, PowerSheet
@@ -25,6 +27,7 @@ from tonesim.units import format_quantity
 
 _LEAST = 1e-9  # what is less is called so
 _MOST_RTH = 1e4  # K/W; what allows more allows any
+_MOST_PERCENT = 1000.0  # a deviation beyond it is one of another kind
 _LEAST_GAIN_V = 1e-3  # a limit whose lifting brings less brings nothing
 _OF_ITS_OWN = ""  # unit of a column whose values bring their units along
 
@@ -88,6 +91,7 @@ def tables(sheet: Sheet) -> list[Table]:
         (sheet.square, _square),
         (sheet.stability, _stability),
         (sheet.power_up, _power_up),
+        (sheet.against, _against),
     )
     for part, make in makers:
         if part is not None:
@@ -589,3 +593,46 @@ def _power_up(found: PowerUpSheet) -> Iterator[Table]:
             "Over: within 50 mV of where it rests.",
         ),
     )
+
+
+def _against(found: Against) -> Iterator[Table]:
+    yield Table(
+        "against",
+        f"measured figures of {found.file}",
+        (
+            ("figure", ""),
+            ("measured", _OF_ITS_OWN),
+            ("computed", _OF_ITS_OWN),
+            ("deviation", _OF_ITS_OWN),
+            ("of the computed", _OF_ITS_OWN),
+            ("what would explain it", ""),
+        ),
+        tuple(
+            (
+                each.name,
+                Quantity(each.measured, each.unit),
+                Quantity(each.computed, each.unit),
+                Quantity(each.deviation, each.unit),
+                _relative(each),
+                each.verdict,
+            )
+            for each in found.comparisons
+        ),
+        (
+            "Each figure is explained by one tolerance alone, all else as in the design; 10 mV of "
+            "VBE are also what 5 K of a junction make (2 mV/K), a Darlington's two 2.5 K, or as "
+            "much across a chain.",
+            "Windows are common practice unless the JSON names a source. Clip levels are static, "
+            "with the rails as at idle; the onset of clipping is a sine's, with the rails as they "
+            "sag.",
+        ),
+    )
+
+
+def _relative(each: Comparison) -> Value:
+    if each.unit in ("%", "dB"):
+        return Quantity(each.deviation_db, "dB")
+    percent = each.deviation_percent
+    if percent is not None and abs(percent) > _MOST_PERCENT:
+        return f"more than {_MOST_PERCENT:g} %"
+    return Quantity(percent, "%")
