@@ -33,9 +33,9 @@ from tonesim.readings import FIGURES, FigureReading, Readings, read_readings
 from tonesim.sheet import check_sections, measure_sheet
 from tonesim.stage import build_stage
 from tonesim.tables import tables
-from tonesim.tolerances import Tolerance, feedback, hfe, offset, shown_change, supply, vbe
 from tonesim.units import thermal_voltage
 from tonesim.variants import output_at_drive, small_gain
+from tonesim.windows import Tolerance, feedback, hfe, offset, shown_change, supply, vbe
 
 CHAIN = {"bias.upper": ["1N4148", "BAT85", "BAT85"], "bias.lower": ["1N4148", "BAT85", "BAT85"]}
 VBE_12_MV = {"output.upper_vbe_shift_v": 0.012, "output.lower_vbe_shift_v": 0.012}

@@ -23,7 +23,7 @@ The modules, in the order in which one may import another (never the other way r
 - `tonesim.loop`: a feedback loop in small signals: op-amp poles, linear networks
 - `tonesim.margins`: margins, poles and verdict of a loop
 - `tonesim.curve`: transfer surfaces, idle point, clip levels
-- `tonesim.tolerances`: what parts come with, each spread as a change of a design
+- `tonesim.windows`: what parts come with, each spread as a change of a design
 - `tonesim.explanation`: the tolerance at which a computed figure meets a measured one
 - `tonesim.front`: gain stage, tone network and volume in numbers
 - `tonesim.smallsignal`: the stage around an operating point, with the charge of its devices

@@ -17,7 +17,18 @@ from tonesim.explanation import Comparison, Target, compare
 from tonesim.measured import MeasuredTable
 from tonesim.pool import Progress
 from tonesim.readings import FIGURES, FigureReading, LevelReading, Readings
-from tonesim.tolerances import (
+from tonesim.units import format_quantity, ratio_to_db
+from tonesim.variants import (
+    Sine,
+    Variants,
+    clip_reach,
+    find_input,
+    loaded_rails,
+    output_at_drive,
+    rail_means,
+    small_gain,
+)
+from tonesim.windows import (
     Tolerance,
     bandwidth,
     current_limit,
@@ -33,17 +44,6 @@ from tonesim.tolerances import (
     supply,
     swing,
     vbe,
-)
-from tonesim.units import format_quantity, ratio_to_db
-from tonesim.variants import (
-    Sine,
-    Variants,
-    clip_reach,
-    find_input,
-    loaded_rails,
-    output_at_drive,
-    rail_means,
-    small_gain,
 )
 
 # What a reading is good for: share of it, and the last digit (common practice, no source).

@@ -416,7 +416,13 @@ def bench(
     from tonesim.tables import tables, to_csv
 
     with progress_bars(1000) as begin:
-        _bench, sheet = measure_sheet(design, sections, air, begin("bench", 1000), readings)
+        rig, sheet = measure_sheet(design, sections, air, begin("bench", 1000), readings)
+    drawn: tuple[Path, ...] = ()
+    if pictures is not None:
+        from tonesim.plot import draw_pictures
+
+        with progress_bars(1000) as begin:
+            drawn = draw_pictures(rig, sheet, Path(pictures), begin("pictures", 1000))
     if csv_file is not None:
         from tonesim.wav import write_text_aside
 
@@ -425,6 +431,8 @@ def bench(
         _print_json(sheet.as_dict())
     else:
         show_sheet(sheet, tables(sheet))
+        for path in drawn:
+            click.echo(str(path))
 
 
 @commands.command(

@@ -12,8 +12,8 @@ from functools import partial
 
 from scipy.optimize import brentq
 
-from tonesim.tolerances import Tolerance, shown_change
 from tonesim.units import format_quantity, ratio_to_db
+from tonesim.windows import Tolerance, shown_change
 
 WITHIN = (0.5, 1.0)  # shares of a window at which a bracket is looked for
 BEYOND = (*WITHIN, 2.0, 3.0)  # the same where no tolerance is enough

@@ -17,7 +17,7 @@ from tonesim.design import SIDES, Side
 from tonesim.kernel.static import half_at_rest, solve_static
 from tonesim.probe import BASE_RATE_HZ, Probe
 from tonesim.stage import Stage
-from tonesim.tolerances import Tolerance
+from tonesim.windows import Tolerance
 
 _COARSE_HZ = 900.0  # below it the internal rate itself is fine enough
 _LOW_HZ, _LONG_S = 150.0, 0.5  # below this frequency a record this long, to hold enough cycles

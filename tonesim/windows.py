@@ -13,16 +13,20 @@ from typing import Any
 from tonesim.circuit import Circuit, bench_load, lower
 from tonesim.design import BatterySupply, Design, Side, TransformerSupply
 from tonesim.kernel.half import CHAIN_MULTIPLIER, HalfParams
+from tonesim.tolerance import Tolerances
 from tonesim.units import format_quantity
 
 PRACTICE = "common practice, no source"
-VBE_V = 0.030  # either way: a saturation current 3.2 times as large or as small
-LEAST_HFE, MOST_HFE = 0.5, 1.6  # of the typical gain, inside the sheets' windows
-RESISTOR_PERCENT = 5.0
-MAINS_PERCENT = 10.0
+VBE_V = Tolerances.vbe_v  # either way: a saturation current 3.2 times as large or as small
+LEAST_HFE, MOST_HFE = (
+    Tolerances.hfe_least,
+    Tolerances.hfe_most,
+)  # of the typical gain, inside the sheets' windows
+RESISTOR_PERCENT = Tolerances.resistors_percent
+MAINS_PERCENT = Tolerances.supply_percent
 BATTERY_PERCENT = 10.0  # from charged to flat
 PANEL_PERCENT = 2.0  # a supply's own meter
-RESERVOIR_PERCENT = 20.0
+RESERVOIR_PERCENT = Tolerances.reservoir_percent
 LEAST_SWING_V, MOST_SWING_V = -1.5, 0.5  # least swing of op-amp sheets against the typical
 LEAST_LIMIT, MOST_LIMIT = 0.25, 1.5  # 10 and 60 mA of a TL072, typically 40 (its sheet)
 LEAST_BANDWIDTH, MOST_BANDWIDTH = 0.6, 1.4
