@@ -54,7 +54,8 @@ def measure_gain(bench: Bench) -> GainSheet:
             multiply *= 2
         probe = Probe(bench.stiff, multiply)
         seconds = round(_CYCLES * probe.rate_hz / frequency_hz) / probe.rate_hz
-        tone = probe.tone(((frequency_hz, peak_v),), seconds)
+        # Sixteen cycles as they are: moved to fifteen or seventeen it would be another frequency.
+        tone = probe.tone(((frequency_hz, peak_v),), seconds, prime=False)
         unsettled += probe.solved.unsettled_steps
         return float(amplitudes_at(tone.output_v, tone.cycles)[0])
 
