@@ -29,6 +29,8 @@ _LEVELS = 20
 _FREQUENCIES = (20, 30, 50, 100, 200, 500, 1e3, 2e3, 5e3, 7e3, 10e3, 15e3, 20e3, 30e3, 40e3)
 _LONG_S = 0.5  # record below this frequency, so that it holds enough cycles
 _LOW_HZ = 150.0
+_MIDDLE_S = 0.1  # the same, up to where the shortest record holds enough
+_MIDDLE_HZ = 900.0
 _COARSE_HZ = 900.0  # below it the internal rate itself does
 _MODULATION_HZ = (60.0, 7000.0)
 _DIFFERENCE_HZ = (19_000.0, 20_000.0)
@@ -103,6 +105,8 @@ def measure_point(
     """Distortion of one sine on a probe at rest."""
     peak = bench.clip_point.input_peak_v * db_to_ratio(level_db)
     seconds = _LONG_S if frequency_hz < _LOW_HZ else bench.record_s
+    if frequency_hz < _MIDDLE_HZ:
+        seconds = max(seconds, _MIDDLE_S)
     tone = probe.tone(((frequency_hz, peak),), seconds)
     found = distortion_of(tone, probe.rate_hz, bench.stage.circuit.mains_hz)
     output = found.fundamental_v / np.sqrt(2.0)
