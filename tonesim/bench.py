@@ -212,9 +212,10 @@ def measure(probe: Probe, frequency_hz: float, peak_v: float, seconds: float) ->
     """
     tone = probe.tone(((frequency_hz, peak_v),), seconds)
     n, cycles = tone.output_v.size, tone.cycles[0]
-    before = probe.draw()
+    before, given = probe.draw(), probe.energy()
     trace = probe.trace(sine(cycles * probe.rate_hz / n, peak_v, probe.rate_hz, n))
     draw = (probe.draw() - before) * probe.rate_hz / n
+    supply = (probe.energy() - given) * probe.rate_hz / n
     circuit = probe.stage.circuit
     p, m, v = trace.positive_v, trace.negative_v, trace.output_v
 
@@ -222,7 +223,6 @@ def measure(probe: Probe, frequency_hz: float, peak_v: float, seconds: float) ->
         flowing = np.maximum(current, 0.0)
         return float(np.mean(flowing * across - ohm * flowing**2))
 
-    supply = float(np.mean(p) * draw[0] + np.mean(m) * draw[1])
     return Reading(
         frequency_hz=cycles * probe.rate_hz / n,
         input_peak_v=peak_v,

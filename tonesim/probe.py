@@ -130,6 +130,10 @@ class Probe:
         e = self._evidence
         return np.array([e[loop.CHARGE_P], e[loop.CHARGE_N]]) / self.rate_hz
 
+    def energy(self) -> float:
+        """Energy drawn from both rails so far, joules."""
+        return float(self._evidence[loop.ENERGY_RAILS]) / self.rate_hz
+
     def tone(
         self, parts: tuple[tuple[float, float], ...], seconds: float, *, prime: bool = True
     ) -> Tone:
