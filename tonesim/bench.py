@@ -17,7 +17,7 @@ from tonesim.design import Design
 from tonesim.errors import SolverError
 from tonesim.harmonics import Harmonics, analyse_harmonics
 from tonesim.kernel.rails import STIFF
-from tonesim.probe import Probe, Tone
+from tonesim.probe import Probe, Solved, Tone
 from tonesim.signals import Signal, sine
 from tonesim.stage import Stage, build_stage
 
@@ -93,6 +93,18 @@ class Bench:
     def loudspeaker_probe(self) -> Probe:
         """Probe at the internal rate on the stage as drawn."""
         return Probe(self.stage)
+
+    @cached_property
+    def still_probe(self) -> Probe:
+        """The fine one on rails that stand still; for the floor of the computation."""
+        return Probe(self.stiff, _MULTIPLY)
+
+    @property
+    def solved(self) -> Solved:
+        """What the solver did so far in all runs of all these probes."""
+        names = ("probe", "fine_probe", "loudspeaker_probe", "still_probe")
+        used = [self.__dict__[name] for name in names if name in self.__dict__]
+        return sum((probe.solved_in_all for probe in used), Solved())
 
     @cached_property
     def clip_point(self) -> Reading:

@@ -19,7 +19,7 @@ from tonesim.harmonics import (
     modulation_distortion,
 )
 from tonesim.pool import Progress, run_all
-from tonesim.probe import BASE_RATE_HZ, Probe, Solved
+from tonesim.probe import Probe, Solved
 from tonesim.units import db_to_ratio
 
 LEVELS_DB = (-1.0, -20.0, -40.0)  # relative to the clip point
@@ -170,7 +170,8 @@ def measure_distortion(bench: Bench, progress: Progress | None = None) -> Distor
     pairs = [p for p in found if isinstance(p, IntermodulationPoint)]
     rest = points[len(levels) :]
     size = len(_FREQUENCIES)
-    still = Probe(bench.stiff, round(bench.fine_probe.rate_hz / BASE_RATE_HZ))
+    still = bench.still_probe.twin()
+    probes.append(still)
     floor = measure_point(bench, still, TONE_HZ, LEVELS_DB[0])
     return DistortionSheet(
         tone_hz=points[0].frequency_hz,

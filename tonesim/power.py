@@ -161,19 +161,14 @@ def measure_power(bench: Bench, progress: Progress | None = None) -> PowerSheet:
         at_thd.append(
             None if peak is None else measure(bench.probe.twin(), TONE_HZ, peak, bench.record_s)
         )
-    probes: list[Probe] = []
-
-    def fresh(probe: Probe) -> Probe:
-        probes.append(probe.twin())
-        return probes[-1]
-
     jobs = [
-        partial(heat_at, fresh(bench.probe), TONE_HZ, clip.input_peak_v, share) for share in _SHARES
+        partial(heat_at, bench.probe.twin(), TONE_HZ, clip.input_peak_v, share) for share in _SHARES
     ]
-    speaker = bench.design.load.part is not None
-    if speaker:
+    used = [bench.probe]
+    if bench.design.load.part is not None:
+        used.append(bench.loudspeaker_probe)
         jobs += [
-            partial(heat_at, fresh(bench.loudspeaker_probe), f, clip.input_peak_v, share)
+            partial(heat_at, bench.loudspeaker_probe.twin(), f, clip.input_peak_v, share)
             for f in _hard_frequencies(bench)
             for share in (0.4, 0.6, 0.8, 1.0)
         ]
@@ -193,7 +188,7 @@ def measure_power(bench: Bench, progress: Progress | None = None) -> PowerSheet:
         ripple_idle_v=(bench.rest.upper.rail_ripple_v, bench.rest.lower.rail_ripple_v),
         hum_idle_v=hum_at_idle(bench) if mains else 0.0,
         hum_full_v=clip.harmonics.hum_v if mains else 0.0,
-        solved=sum((each.solved for each in (*probes, bench.probe)), Solved()),
+        solved=sum((probe.solved_in_all for probe in used), Solved()),
     )
 
 

@@ -83,15 +83,21 @@ class Probe:
         self._params = step_params(stage, 1.0 / self.rate_hz, TOLERANCE_V)
         self._state = state_at_rest(stage)
         self._evidence = np.zeros(loop.EVIDENCE_SIZE)
+        self._twins: list[Probe] = []
         still = self._params.rail_positive.kind == self._params.rail_negative.kind == STIFF
         self.run(np.zeros(_REST_STEPS if still else self.frames(_REST_S)))
         self._rest = self._state.copy()
 
     def twin(self) -> "Probe":
-        """A probe on the same stage, at rest, that shares nothing that changes."""
+        """A probe on the same stage, at rest, that shares nothing that changes.
+
+        Not for several threads at once: this one keeps count of its twins.
+        """
         other = copy(self)
         other._state = self._rest.copy()
         other._evidence = np.zeros(loop.EVIDENCE_SIZE)
+        other._twins = []
+        self._twins.append(other)
         return other
 
     def frames(self, seconds: float) -> int:
@@ -121,9 +127,14 @@ class Probe:
 
     @property
     def solved(self) -> Solved:
-        """What the solver did so far."""
+        """What the solver did so far in this probe."""
         e = self._evidence
         return Solved(int(e[loop.STEPS]), int(e[loop.UNSETTLED]), int(e[loop.RESCUED]))
+
+    @property
+    def solved_in_all(self) -> Solved:
+        """The same in this probe and all its twins."""
+        return sum((twin.solved_in_all for twin in self._twins), self.solved)
 
     def draw(self) -> Signal:
         """Charge drawn from both rails so far, (2,), coulombs."""

@@ -162,11 +162,9 @@ def measure_sheet(
 
 
 def _sheet(bench: Bench, found: dict[str, Any]) -> Sheet:
-    unsettled = 0
-    for section in found.values():
-        if hasattr(section, "solved"):
-            unsettled += section.solved.unsettled_steps
-        unsettled += getattr(section, "unsettled_steps", 0)
+    # The bench counts for its own probes; sections with probes of their own count for them.
+    unsettled = bench.solved.unsettled_steps
+    unsettled += sum(getattr(section, "unsettled_steps", 0) for section in found.values())
     return Sheet(
         title=bench.design.title,
         design_key_sha256=bench.rest.design_key_sha256,
