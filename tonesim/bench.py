@@ -114,10 +114,14 @@ class Bench:
         """
         probe = self.probe
         small = self.clip_v / self.gain / 10.0
-        linear = _crest(probe, small, self.rest.output_offset_v) / small
+
+        def crest(peak: float) -> float:
+            return _crest(probe, peak, self.rest.output_offset_v, self.record_s)
+
+        linear = crest(small) / small
 
         def short(peak: float) -> float:
-            return _crest(probe, peak, self.rest.output_offset_v) / (linear * peak) - 1.0 + _SHORT
+            return crest(peak) / (linear * peak) - 1.0 + _SHORT
 
         high = self.clip_v / self.gain
         for _ in range(8):
@@ -130,12 +134,12 @@ class Bench:
         return measure(probe.twin(), TONE_HZ, float(peak), self.record_s)
 
 
-def _crest(probe: Probe, peak_v: float, offset_v: float) -> float:
+def _crest(probe: Probe, peak_v: float, offset_v: float, seconds: float) -> float:
     """Lowest crest, of either sign, of any cycle of a sine in the steady state.
 
     Under ripple the cycles differ; the one on the lowest rail clips first.
     """
-    tone = probe.twin().tone(((TONE_HZ, peak_v),), RECORD_S)
+    tone = probe.twin().tone(((TONE_HZ, peak_v),), seconds)
     ends = np.arange(tone.cycles[0]) * tone.output_v.size // tone.cycles[0]
     y = tone.output_v - offset_v
     return float(min(np.maximum.reduceat(y, ends).min(), np.maximum.reduceat(-y, ends).min()))
