@@ -41,7 +41,10 @@ def run_all(jobs: Sequence[Callable[[], T]], progress: Progress | None = None) -
                         future.result()  # a failure ends the rest
                 if progress is not None:
                     progress(sum(future.done() for future in futures) / len(futures))
-            return [future.result() for future in futures]
+            found = [future.result() for future in futures]
+            if progress is not None:
+                progress(1.0)
+            return found
         finally:
             for future in futures:
                 future.cancel()
