@@ -40,8 +40,9 @@ class Heat:
 class RailInBurst:
     """One rail in a burst of a sine at the clip point; magnitudes in volts.
 
-    `sagged_v` is the mean over the burst's last mains cycle, `recovery_s` the time after the
-    burst until 95 % of the sag are back, None where it is not within the record.
+    `sagged_v` is the mean over the burst's last cycle, of the mains where there is one, else of
+    the sine. `recovery_s` is the time after the burst until 95 % of the sag are back, None where
+    it is not within the record; with mains it is the mean of a whole mains cycle that is back.
     """
 
     idle_v: float
@@ -130,7 +131,9 @@ def rail_in_burst(rail_v: np.ndarray, rate_hz: float, mains_hz: float) -> RailIn
     total = np.concatenate([[0.0], np.cumsum(rail_v)])
     mean = (total[cycle:] - total[:-cycle]) / cycle  # of the cycle that begins there
     idle, sagged = float(mean[start - cycle]), float(mean[stop - cycle])
-    back = np.flatnonzero(mean[stop - cycle :] >= idle - _BACK * (idle - sagged))
+    # Only ripple needs a mean after the burst; it would hide what is quicker than a cycle.
+    after = mean[stop - cycle :] if mains_hz else rail_v[stop:]
+    back = np.flatnonzero(after >= idle - _BACK * (idle - sagged))
     recovery = None
     if idle - sagged < 1e-6 * idle:
         recovery = 0.0
