@@ -23,6 +23,7 @@ if TYPE_CHECKING:
 
 INTERRUPTED = 130  # 128 + SIGINT, as shells count
 BROKEN_PIPE = 141  # 128 + SIGPIPE
+LEAST_AMBIENT_C, MOST_AMBIENT_C = -40.0, 150.0  # as for the temperatures of a design
 COMPILE_S = 12  # on one core of a machine of 2024
 KINDS = ("transistors", "diodes", "opamps", "loudspeakers", "cabinets")
 F = TypeVar("F", bound=Callable[..., Any])
@@ -346,6 +347,16 @@ def check(source: str, changes: tuple[str, ...], parts_file: str | None, as_json
         show_check(found)
 
 
+def _check_text_output(path: str, inputs: Sequence[str | None]) -> None:
+    """Refuse, before the work begins, a place that cannot be written or holds an input."""
+    from tonesim.wav import refuse_same_file
+
+    folder = Path(os.path.realpath(path)).parent
+    if not folder.is_dir():
+        raise OutputError(f"{path} cannot be written: the folder {folder} does not exist")
+    refuse_same_file(path, [name for name in inputs if name is not None])
+
+
 @commands.command(
     epilog="\b\nExamples:\n  tonesim bench no-chain\n  tonesim bench full-chain idle heat "
     "--set output.emitter_ohm=0R47"
@@ -380,6 +391,12 @@ def bench(
 
     check_sections(sections)
     air = _quantity("--ambient", ambient, "°C")
+    if not LEAST_AMBIENT_C <= air <= MOST_AMBIENT_C:
+        raise UsageError(
+            f"--ambient is {air:g} °C, expected {LEAST_AMBIENT_C:g} to {MOST_AMBIENT_C:g}"
+        )
+    if csv_file is not None:
+        _check_text_output(csv_file, (source, parts_file))
     design, _ = _load(source, changes, parts_file)
     _warn_of_compiling()
     from tonesim.show import progress_bars, show_sheet
