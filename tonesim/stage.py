@@ -31,11 +31,16 @@ def find_idle(circuit: Circuit, title: str) -> OperatingPoint:
         If there is none.
     """
     idle = idle_point(circuit)
-    if not idle.converged:
-        raise SolverError(
-            f"design {title!r}: the stage finds no idle point "
-            f"(imbalance {idle.residual_a:.3g} A, expected below 1e-6 A)"
-        )
+    rails_v = idle.rail_positive.mean_v, idle.rail_negative.mean_v
+    why = None
+    if not idle.residual_a < 1e-6:
+        why = f"imbalance {idle.residual_a:.3g} A, expected below 1e-6 A"
+    elif not idle.converged:
+        why = "the rails do not come to rest under what the stage draws from them"
+    elif min(rails_v) <= 0.0:
+        why = "the supply's current limit is below what the op-amp alone draws"
+    if why is not None:
+        raise SolverError(f"design {title!r}: the stage finds no idle point ({why})")
     return idle
 
 
