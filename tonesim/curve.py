@@ -1,5 +1,6 @@
 """Static answers: transfer surfaces, rails at rest, the idle point and the clip levels."""
 
+import math
 from collections import OrderedDict
 from dataclasses import dataclass
 from typing import NamedTuple
@@ -27,6 +28,7 @@ FAR_V = 1e6  # input that asks for the clip level [V]
 _STEEP, _LEAST_REACH = 1 / 16, 1 / 1024  # reach of drive of a measured closed loop [V]
 _STEEP_CELLS = 512  # of one half's share of the fine zone then
 _KEPT_SURFACES = 16
+_SHRINKS = 0.8  # what each round of the idle point must bring its rails' move down to
 _NEAR = 0.5  # share of its current limit from which the op-amp counts as near it
 _TIE = 0.05  # share by which two limits' effects may differ and still be a tie
 
@@ -228,7 +230,9 @@ def rail_at_rest(rail: RailParams, draw_a: float, mains_hz: float) -> Rail:
 
     # The diode lets nothing above this in, and without a load nothing takes it out.
     high = rail.v_open - rail.v_diode
-    v = high if draw_a == 0.0 else float(brentq(gap, -rail.v_open, high, xtol=1e-9))
+    if gap(-rail.v_open) < 0.0:
+        return Rail(0.0, 0.0, 0.0, 0.0)  # more than the winding gives into a short circuit
+    v = high if draw_a <= 0.0 else float(brentq(gap, -rail.v_open, high, xtol=1e-9))
     gap(v)
     return Rail(float(trace[0]), float(trace[1]), float(trace[2]), v)
 
@@ -270,14 +274,23 @@ def idle_point(circuit: Circuit) -> OperatingPoint:
     positive = rail_at_rest(circuit.rail_positive, 0.0, circuit.mains_hz)
     negative = rail_at_rest(circuit.rail_negative, 0.0, circuit.mains_hz)
     settled = False
-    point = static_point(circuit, 0.0, positive.mean_v, negative.mean_v)
+    v_p, v_n = positive.mean_v, negative.mean_v
+    point = static_point(circuit, 0.0, v_p, v_n)
+    share, before = 1.0, math.inf
     for _ in range(60):
         draw_p, draw_n = _draw(circuit, point)
-        p = rail_at_rest(circuit.rail_positive, draw_p, circuit.mains_hz)
-        n = rail_at_rest(circuit.rail_negative, draw_n, circuit.mains_hz)
-        moved = max(abs(p.mean_v - positive.mean_v), abs(n.mean_v - negative.mean_v))
-        positive, negative = p, n
-        point = static_point(circuit, 0.0, positive.mean_v, negative.mean_v)
+        positive = rail_at_rest(circuit.rail_positive, draw_p, circuit.mains_hz)
+        negative = rail_at_rest(circuit.rail_negative, draw_n, circuit.mains_hz)
+        moved = max(abs(positive.mean_v - v_p), abs(negative.mean_v - v_n))
+        if moved > _SHRINKS * before:
+            share *= 0.5  # a weak supply answers to more draw with so little that both swing
+        before = moved
+        if share == 1.0:
+            v_p, v_n = positive.mean_v, negative.mean_v
+        else:
+            v_p += share * (positive.mean_v - v_p)
+            v_n += share * (negative.mean_v - v_n)
+        point = static_point(circuit, 0.0, v_p, v_n)
         if moved < 1e-6:
             settled = True
             break
