@@ -231,11 +231,13 @@ def _clip(clip: ClipSheet) -> Iterator[Table]:
         yield _half_clip(half)
     yield Table(
         "clip",
-        "sine of 1 kHz",
+        "levels",
         (("", ""), ("figure", _OF_ITS_OWN)),
         (
+            ("upper half, slow signal", Quantity(clip.upper.level_v, "V")),
+            ("lower half, slow signal", Quantity(clip.lower.level_v, "V")),
             ("goes first", clip.first),
-            ("output at the onset of clipping, rms", Quantity(clip.sine_output_v, "V")),
+            ("sine of 1 kHz at the onset of clipping, rms", Quantity(clip.sine_output_v, "V")),
             ("input for it, peak", Quantity(clip.sine_input_peak_v, "V")),
         ),
         ("Onset: the lowest crest falls 1 % short, with the rails as they sag.",),
