@@ -101,14 +101,24 @@ def to_csv(found: Sequence[Table]) -> str:
     writer = csv.writer(text, lineterminator="\n")
     writer.writerow(["section", "table", "row", "quantity", "value", "unit"])
     for table in found:
-        for row in table.rows:
-            name = shown(row[0], table.columns[0][1])
+        for name, row in zip(_row_names(table), table.rows, strict=True):
             for (heading, unit), value in zip(table.columns[1:], row[1:], strict=True):
                 plain, own = value if isinstance(value, Quantity) else (value, unit)
                 if plain is not None:
                     text_ = f"{plain:.9g}" if isinstance(plain, float) else plain
                     writer.writerow([table.section, table.title, name, heading, text_, own])
     return text.getvalue()
+
+
+def _row_names(table: Table) -> list[str]:
+    """Names of a table's rows; where rows share theirs, the next cell belongs to it."""
+    units = [unit for _, unit in table.columns]
+    names = [shown(row[0], units[0]) for row in table.rows]
+    if len(set(names)) == len(names):
+        return names
+    return [
+        f"{name}, {shown(row[1], units[1])}" for name, row in zip(names, table.rows, strict=True)
+    ]
 
 
 def _idle(sheet: Sheet, idle: IdleSheet) -> Iterator[Table]:
