@@ -105,14 +105,24 @@ def to_csv(found: Sequence[Table]) -> str:
     writer = csv.writer(text, lineterminator="\n")
     writer.writerow(["section", "table", "row", "quantity", "value", "unit"])
     for table in found:
-        for row in table.rows:
-            name = shown(row[0], table.columns[0][1])
+        for name, row in zip(_row_names(table), table.rows, strict=True):
             for (heading, unit), value in zip(table.columns[1:], row[1:], strict=True):
                 plain, own = value if isinstance(value, Quantity) else (value, unit)
                 if plain is not None:
                     text_ = f"{plain:.9g}" if isinstance(plain, float) else plain
                     writer.writerow([table.section, table.title, name, heading, text_, own])
     return text.getvalue()
+
+
+def _row_names(table: Table) -> list[str]:
+    """Names of a table's rows; where rows share theirs, the next cell belongs to it."""
+    units = [unit for _, unit in table.columns]
+    names = [shown(row[0], units[0]) for row in table.rows]
+    if len(set(names)) == len(names):
+        return names
+    return [
+        f"{name}, {shown(row[1], units[1])}" for name, row in zip(names, table.rows, strict=True)
+    ]
 
 
 def _idle(sheet: Sheet, idle: IdleSheet) -> Iterator[Table]:
@@ -235,11 +245,13 @@ def _clip(clip: ClipSheet) -> Iterator[Table]:
         yield _half_clip(half)
     yield Table(
         "clip",
-        "sine of 1 kHz",
+        "levels",
         (("", ""), ("figure", _OF_ITS_OWN)),
         (
+            ("upper half, slow signal", Quantity(clip.upper.level_v, "V")),
+            ("lower half, slow signal", Quantity(clip.lower.level_v, "V")),
             ("goes first", clip.first),
-            ("output at the onset of clipping, rms", Quantity(clip.sine_output_v, "V")),
+            ("sine of 1 kHz at the onset of clipping, rms", Quantity(clip.sine_output_v, "V")),
             ("input for it, peak", Quantity(clip.sine_input_peak_v, "V")),
         ),
         ("Onset: the lowest crest falls 1 % short, with the rails as they sag.",),
