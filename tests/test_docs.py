@@ -17,7 +17,7 @@ ROOT = Path(__file__).parent.parent
 README = (ROOT / "README.md").read_text()
 COMMANDS = sorted(cli.commands.commands)
 WITH_DOCTESTS = (
-    *("units", "catalogue", "measured", "design", "circuit", "front"),
+    *("units", "catalogue", "measured", "design", "circuit", "front", "tolerance"),
     *("signals", "oversample", "level"),
 )
 

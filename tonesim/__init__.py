@@ -7,6 +7,7 @@ The modules, in the order in which one may import another (never the other way r
 - `tonesim.signals`: what a signal is, and test signals
 - `tonesim.harmonics`: distortion, hum and residue of coherent records
 - `tonesim.match`: a fair reference: what a linear stage could have made
+- `tonesim.ranks`: influence told by ranks
 - `tonesim.pool`: work spread over threads
 - `tonesim.kernel`: compiled numerical core: devices, halves, driver, rails, load, filters, front
 - `tonesim.record`: tables of a file as frozen models, errors as sentences
@@ -18,6 +19,7 @@ The modules, in the order in which one may import another (never the other way r
 - `tonesim.thermal`: junction temperatures, heat sinks, thermal runaway
 - `tonesim.designfile`: design files and presets to a checked `Design`, and back
 - `tonesim.circuit`: a design to bare numbers
+- `tonesim.tolerance`: which values of parts differ from build to build, and one such build
 - `tonesim.loop`: a feedback loop in small signals: op-amp poles, linear networks
 - `tonesim.margins`: margins, poles and verdict of a loop
 - `tonesim.curve`: transfer surfaces, idle point, clip levels
@@ -34,6 +36,8 @@ The modules, in the order in which one may import another (never the other way r
 - `tonesim.distortion`: distortion against level and frequency, and with two tones
 - `tonesim.transient`: square wave and power-up
 - `tonesim.heat`: heat sinks, and whether idle settles on them
+- `tonesim.figures`: a few figures of one build, fast
+- `tonesim.spread`: many builds from parts within their tolerances
 - `tonesim.stability`: how near the loop of a design is to oscillation; output impedance
 - `tonesim.oversample`: up to the internal rate and down again
 - `tonesim.processor`: the stage as a processor of blocks, `Amplifier`
@@ -53,6 +57,7 @@ The modules, in the order in which one may import another (never the other way r
 - `tonesim.render`: a recording through a design into a file
 - `tonesim.demo`: the shipped recordings through three presets, and what to listen for
 - `tonesim.show`: text on the terminal
+- `tonesim.showspread`: the spread of many builds on the terminal
 - `tonesim.cli`: the command line
 
 Nothing is imported here, so that the command line answers at once.

@@ -1,6 +1,7 @@
 """Static answers: transfer surfaces, rails at rest, the idle point and the clip levels."""
 
 import math
+import threading
 from collections import OrderedDict
 from dataclasses import dataclass
 from typing import NamedTuple
@@ -153,6 +154,7 @@ def grid_axes(grid: Grid) -> tuple[Table, Table]:
 
 
 _surfaces: OrderedDict[tuple[object, ...], tuple[Table, float, int]] = OrderedDict()
+_surfaces_lock = threading.Lock()  # stages are built on several threads
 
 
 def fingerprint(*values: object) -> tuple[object, ...]:
@@ -181,24 +183,39 @@ def build_surface(half: HalfParams, grid: Grid) -> tuple[Table, float, int]:
         Most steps any node needed.
     """
     key = fingerprint(half, grid)
-    if key in _surfaces:
-        _surfaces.move_to_end(key)
-        return _surfaces[key]
+    with _surfaces_lock:
+        if key in _surfaces:
+            _surfaces.move_to_end(key)
+            return _surfaces[key]
+    found = _tabulated(half, grid)
+    with _surfaces_lock:
+        _surfaces[key] = found
+        while len(_surfaces) > _KEPT_SURFACES:
+            _surfaces.popitem(last=False)
+    return found
+
+
+def _tabulated(half: HalfParams, grid: Grid) -> tuple[Table, float, int]:
     us, hs = grid_axes(grid)
     table = np.empty((hs.size, us.size, 4))
     residual, steps = tabulate(us, hs, half, table)
     limit_slopes(table, us)
-    _surfaces[key] = (table, residual, steps)
-    while len(_surfaces) > _KEPT_SURFACES:
-        _surfaces.popitem(last=False)
-    return _surfaces[key]
+    return table, residual, steps
 
 
-def build_surfaces(circuit: Circuit) -> Surfaces:
-    """Both halves' transfer surfaces on one grid."""
-    grid = grid_for(circuit)
-    upper, r_up, n_up = build_surface(circuit.upper, grid)
-    lower, r_low, n_low = build_surface(circuit.lower, grid)
+def build_surfaces(circuit: Circuit, grid: Grid | None = None) -> Surfaces:
+    """Both halves' transfer surfaces on one grid.
+
+    Parameters
+    ----------
+    circuit : Circuit
+    grid : Grid, optional
+        By default one that holds every voltage. Surfaces of any other are not kept for later.
+    """
+    build = build_surface if grid is None else _tabulated
+    grid = grid or grid_for(circuit)
+    upper, r_up, n_up = build(circuit.upper, grid)
+    lower, r_low, n_low = build(circuit.lower, grid)
     return Surfaces(grid, upper, lower, max(r_up, r_low), max(n_up, n_low))
 
 

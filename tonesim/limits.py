@@ -214,8 +214,11 @@ def _doubt_idle(design: Design) -> list[str]:
     return doubts
 
 
-def _current_gain(part: Transistor, current_a: float, temperature_c: float) -> float:
-    """Find the current gain at a collector current, by bisection on the output device's share."""
+def current_gain(part: Transistor, current_a: float, temperature_c: float) -> float:
+    """Find the current gain at a collector current in amperes.
+
+    By bisection on the output device's share of it.
+    """
     low, high = 1e-9, current_a
     for _ in range(50):
         middle = math.sqrt(low * high)
@@ -231,7 +234,7 @@ def _doubt_gain_windows(design: Design) -> list[str]:
     for side, factor in zip(SIDES, factors, strict=True):
         part = design.part_for(side)
         for current, least, most in part.hfe_windows:
-            gain = factor * _current_gain(part, current, 25.0)
+            gain = factor * current_gain(part, current, 25.0)
             if (least and gain < least) or (most and gain > most):
                 window = f"{least or 0:g} to {most:g}" if most else f"{least:g} or more"
                 doubts.append(
@@ -279,7 +282,7 @@ def _doubt_base_current(design: Design) -> list[str]:
     for side, other, factor, limit in zip(SIDES, SIDES[::-1], factors, limits, strict=True):
         part, wanted = design.part_for(side), 0.6 * design.rail_for(side)
         current = wanted / design.load.bench_ohm
-        base = current / (factor * _current_gain(part, current, 25.0))
+        base = current / (factor * current_gain(part, current, 25.0))
         brought = _brought(design, side, wanted)
         from_driver = base
         if brought is not None:
