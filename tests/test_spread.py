@@ -27,12 +27,11 @@ from tonesim.distortion import measure_point
 from tonesim.errors import DesignError, OutputError, SolverError, UsageError
 from tonesim.figures import Conditions, Evidence, Figures, Measured, Reach, measure_build
 from tonesim.limits import current_gain
+from tonesim.ranks import beyond_chance, rank_correlations, rank_regression
 from tonesim.spread import (
     QUANTITIES,
     SpreadReport,
     check_place,
-    rank_correlations,
-    rank_regression,
     run_spread,
     table_text,
     worst_text,
@@ -224,6 +223,19 @@ def test_drawing_past_what_a_design_can_say_is_refused_before_the_work():
         make_design({"output.upper_vbe_shift_v": 0.1001})
     with pytest.raises(DesignError):
         make_design({"output.upper_hfe_factor": 0.199})
+
+
+def test_a_measured_curve_is_one_build_and_not_drawn():
+    drive = [-12.0, -6.0, -1.0, 0.0, 1.0, 6.0, 12.0]
+    curve = {
+        "drive_v": drive,
+        "output_v": [-10.5, -5.0, -0.2, 0.0, 0.2, 5.0, 10.5],  # invented
+        "positive_v": 15.0,
+        "load_ohm": 8.0,
+    }
+    design = make_design({"measured": curve})
+    with pytest.raises(DesignError, match="which holds the parts of one build"):
+        varied_parts(design, DEFAULTS)
 
 
 # Figures of one build
@@ -484,7 +496,7 @@ def test_parts_without_influence_seldom_stand_out(rng):
     """Three standard deviations of chi-squared with one degree: 2.2 % of all (scipy.stats)."""
     n, trials = 50, 2000
     rho = rank_correlations(rng.uniform(size=(n, trials)), rng.uniform(size=n))
-    beyond = sum(spread._beyond(r * r, 1, 1.0 / (n - 1)) for r in rho)
+    beyond = sum(beyond_chance(r * r, 1, 1.0 / (n - 1)) for r in rho)
     expected = stats.chi2.sf(1.0 + 3.0 * math.sqrt(2.0), 1)
     assert beyond / trials == pytest.approx(expected, abs=0.01)  # three standard errors
     assert np.mean(rho**2) == pytest.approx(1.0 / (n - 1), rel=0.1)

@@ -7,6 +7,7 @@ The modules, in the order in which one may import another (never the other way r
 - `tonesim.signals`: what a signal is, and test signals
 - `tonesim.harmonics`: distortion, hum and residue of coherent records
 - `tonesim.match`: a fair reference: what a linear stage could have made
+- `tonesim.ranks`: influence told by ranks
 - `tonesim.pool`: work spread over threads
 - `tonesim.kernel`: compiled numerical core: devices, halves, driver, rails, load, filters, front
 - `tonesim.record`: tables of a file as frozen models, errors as sentences

@@ -547,6 +547,117 @@ def _check_places(places: Sequence[str], source: str) -> None:
 
 
 @commands.command(
+    epilog="\b\nExample:\n  tonesim spread no-chain --runs 20 --resistors 1 --csv builds.csv"
+)
+@click.argument("source", metavar="DESIGN")
+@_design_options
+@click.option("--runs", type=int, default=200, show_default=True, help="How many builds.")
+@click.option("--seed", type=int, default=1, show_default=True, help="Other builds: another seed.")
+@click.option(
+    "--resistors", metavar="CLASS", default="J", show_default=True, help="Letter, or per cent."
+)
+@click.option("--vbe", metavar="VOLTS", help="VBE of each transistor, either way; 30 mV.")
+@click.option(
+    "--hfe", type=float, nargs=2, metavar="LEAST MOST", help="Factors on hFE; 0.5 and 1.6."
+)
+@click.option("--drops", metavar="VOLTS", help="Forward voltage of each drop, either way; 20 mV.")
+@click.option("--offset", metavar="VOLTS", help="Input offset of the op-amp; its sheet's maximum.")
+@click.option(
+    "--op-amp", type=float, metavar="PERCENT", help="Its current limit and gain-bandwidth; 30."
+)
+@click.option("--reservoirs", type=float, metavar="PERCENT", help="Reservoir capacitors; 20.")
+@click.option("--supply", type=float, metavar="PERCENT", help="Mains, or batteries; 10.")
+@click.option("--csv", "table", metavar="FILE", help="All builds as a table, one row each.")
+@click.option(
+    "--save-worst",
+    "worst",
+    metavar="FIGURE FILE",
+    nargs=2,
+    multiple=True,
+    help="The build worst by a figure as a design file: idle, offset, gain, clip-upper, "
+    "clip-lower, thd-loud, thd-quiet; may be repeated.",
+)
+@_as_json
+def spread(
+    source: str,
+    changes: tuple[str, ...],
+    parts_file: str | None,
+    as_json: bool,
+    **given: Any,
+) -> None:
+    """Draw many builds of a design from parts within their tolerances.
+
+    How far idle current, offset, gain, clip levels and distortion lie apart, and which parts that
+    comes from. Builds that cannot idle or whose parts cannot bear it are counted with the reason.
+    The same seed draws the same builds. Nothing is trimmed, and temperatures stay as they are.
+    """
+    design, _ = _load(source, changes, parts_file)
+    from tonesim.showspread import show_spread
+    from tonesim.spread import check_place, run_spread, table_text, worst_text, write_place
+
+    tolerances = _tolerances(given)
+    worst = [(_figure_named(name), path) for name, path in given["worst"]]
+    places = [path for _, path in worst] + ([given["table"]] if given["table"] else [])
+    _check_places(places, source)
+    for place in places:
+        check_place(place)
+    _warn_of_compiling()
+    from tonesim.show import progress_bars
+
+    with progress_bars(given["runs"]) as begin:
+        advance = begin("builds", given["runs"])
+        report = run_spread(design, given["runs"], tolerances, given["seed"], advance)
+    if given["table"]:
+        write_place(given["table"], table_text(report))
+    for quantity, path in worst:
+        write_place(path, worst_text(report, design, quantity))
+    if as_json:
+        _print_json(report.as_dict())
+    else:
+        show_spread(report)
+
+
+def _tolerances(given: dict[str, Any]) -> Tolerances:
+    """Tolerances from the options; what is not given keeps its default."""
+    from tonesim.tolerance import Tolerances, resistor_percent
+
+    chosen: dict[str, float] = {"resistors_percent": resistor_percent(given["resistors"])}
+    for option, key in (("vbe", "vbe_v"), ("drops", "diode_v"), ("offset", "offset_v")):
+        if given[option] is not None:
+            chosen[key] = _quantity(f"--{option}", given[option], "V")
+    for option, key in (
+        ("op_amp", "op_amp_percent"),
+        ("reservoirs", "reservoir_percent"),
+        ("supply", "supply_percent"),
+    ):
+        if given[option] is not None:
+            chosen[key] = given[option]
+    if given["hfe"]:
+        chosen["hfe_least"], chosen["hfe_most"] = given["hfe"]
+    return Tolerances(**chosen)
+
+
+def _figure_named(name: str) -> str:
+    """Key of the figure that --save-worst names."""
+    from tonesim.spread import QUANTITIES
+
+    keys = {quantity.name: key for key, quantity in QUANTITIES.items()}
+    if name not in keys:
+        raise UsageError(f"--save-worst names {name!r}, expected one of {', '.join(keys)}")
+    return keys[name]
+
+
+def _check_places(places: Sequence[str], source: str) -> None:
+    """Refuse one place for two results, and the design's own file."""
+    from tonesim.wav import refuse_same_file
+
+    for k, place in enumerate(places):
+        if any(os.path.abspath(place) == os.path.abspath(other) for other in places[:k]):
+            raise UsageError(f"{place} is asked for twice, expected a name for each result")
+        refuse_same_file(place, [source])
+
+
+@commands.command(
     epilog="\b\nExamples:\n  tonesim parts diodes\n  tonesim parts transistors TIP122"
 )
 @click.argument("kind", required=False, type=click.Choice(KINDS, case_sensitive=False))

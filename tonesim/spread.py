@@ -16,8 +16,6 @@ from pathlib import Path
 from typing import Any, Literal, NamedTuple
 
 import numpy as np
-import numpy.typing as npt
-from scipy.stats import rankdata
 
 from tonesim.bench import TONE_HZ, Bench
 from tonesim.design import Design
@@ -25,14 +23,12 @@ from tonesim.designfile import design_key, design_to_toml
 from tonesim.errors import DesignError, OutputError, SolverError, UsageError
 from tonesim.figures import LOUD_DB, QUIET_DB, Conditions, Evidence, Figures, measure_build
 from tonesim.pool import Progress, run_all
+from tonesim.ranks import beyond_chance, rank_correlations, rank_regression
 from tonesim.tolerance import Tolerances, Varied, build_with, draw, varied_parts
 from tonesim.units import db_to_ratio
 from tonesim.wav import write_text_aside
 
-Values = npt.NDArray[np.float64]
-
 LEAST_RUNS, MOST_RUNS = 10, 10_000
-_BEYOND = 3.0  # standard deviations above chance that make an influence
 _TABLE_MARK = "build,left out because,"
 _DESIGN_MARK = "# Drawn by tonesim spread"
 
@@ -319,83 +315,25 @@ def _distribution(key: str, nominal: Figures, builds: Sequence[Build]) -> Distri
     )
 
 
-def rank_correlations(x: npt.ArrayLike, y: npt.ArrayLike) -> Values:
-    """Spearman's rank correlation of each column with a quantity; ties have their mean rank.
-
-    Parameters
-    ----------
-    x : (builds, parts) array_like
-    y : (builds,) array_like
-
-    Returns
-    -------
-    (parts,) ndarray
-        Zero where either side is the same in all builds.
-    """
-    a, b = _ranks(x), _ranks(np.asarray(y, dtype=float)[:, None])
-    size = np.sqrt(np.sum(a**2, axis=0) * np.sum(b**2))
-    return np.asarray(np.where(size > 0.0, (a.T @ b)[:, 0] / np.where(size > 0.0, size, 1.0), 0.0))
-
-
-def rank_regression(x: npt.ArrayLike, y: npt.ArrayLike) -> float | None:
-    """Share of a quantity's variance in ranks that all columns' ranks explain linearly.
-
-    Adjusted for the number of columns that vary, 1 - (1 - R²)(n - 1)/(n - k - 1).
-
-    Parameters
-    ----------
-    x : (builds, parts) array_like
-    y : (builds,) array_like
-
-    Returns
-    -------
-    float or None
-        From 0 to 1; None with fewer than twice as many builds as columns, or nothing to explain.
-    """
-    a, b = _ranks(x), _ranks(np.asarray(y, dtype=float)[:, None])[:, 0]
-    a = a[:, np.any(a != 0.0, axis=0)]
-    n, k = a.shape
-    if n < 2 * k + 2 or not np.any(b):
-        return None
-    left = b - a @ np.linalg.lstsq(a, b, rcond=None)[0] if k else b
-    unexplained = float(left @ left / (b @ b))
-    return float(max(1.0 - unexplained * (n - 1) / (n - k - 1), 0.0))
-
-
-def _ranks(x: npt.ArrayLike) -> Values:
-    """Ranks of each column about their mean."""
-    ranks: Values = rankdata(np.asarray(x, dtype=float), axis=0)
-    return np.asarray(ranks - ranks.mean(axis=0))
-
-
 def _ranking(key: str, varied: Sequence[Varied], builds: Sequence[Build]) -> Ranking:
     x = np.array([[build.drawn[each.keys[0]] for each in varied] for build in builds])
     y = np.array([_figure(build, key) for build in builds])
     chance = 1.0 / max(len(builds) - 1, 1)
     rho = rank_correlations(x, y)
     parts = [
-        Influence(each.part, float(r * r), float(r), _beyond(r * r, 1, chance))
+        Influence(each.part, float(r * r), float(r), beyond_chance(r * r, 1, chance))
         for each, r in zip(varied, rho, strict=True)
     ]
     groups = []
     for group in dict.fromkeys(each.group for each in varied):
         shares = [float(r * r) for each, r in zip(varied, rho, strict=True) if each.group == group]
         share = sum(shares)
-        groups.append(Influence(group, share, None, _beyond(share, len(shares), chance)))
+        groups.append(Influence(group, share, None, beyond_chance(share, len(shares), chance)))
 
     def most_first(found: list[Influence]) -> tuple[Influence, ...]:
         return tuple(sorted(found, key=lambda each: -each.share))
 
     return Ranking(key, rank_regression(x, y), most_first(groups), most_first(parts))
-
-
-def _beyond(share: float, parts: int, chance: float) -> bool:
-    """Whether a share is beyond that of parts without influence.
-
-    Their squared rank correlations, over `chance`, are nearly chi-squared with one degree of
-    freedom each: mean 1, variance 2.
-    """
-    return bool(share > chance * (parts + _BEYOND * np.sqrt(2.0 * parts)))
 
 
 def table_text(report: SpreadReport) -> str:

@@ -16,7 +16,7 @@ import numpy as np
 from tonesim.catalogue import Transistor
 from tonesim.design import SIDES, BatterySupply, Design, Side, TransformerSupply
 from tonesim.designfile import build_design
-from tonesim.errors import UsageError
+from tonesim.errors import DesignError, UsageError
 from tonesim.limits import current_gain
 from tonesim.units import thermal_voltage
 
@@ -149,9 +149,16 @@ def varied_parts(design: Design, tolerances: Tolerances) -> tuple[Varied, ...]:
 
     Raises
     ------
+    DesignError
+        If the design stands on a measured curve, which holds the parts of one build.
     UsageError
         If a tolerance reaches past what a design can say.
     """
+    if design.measured is not None:
+        raise DesignError(
+            f"design {design.title!r} stands on a measured curve, which holds the parts of one "
+            "build; parts can be drawn without its section measured (--set measured=)"
+        )
     data = _spelt_out(design)
     return (
         *_resistors(data, tolerances),
