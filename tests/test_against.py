@@ -28,6 +28,7 @@ from tonesim.design import Design
 from tonesim.designfile import load_design, replace
 from tonesim.errors import DesignError, UsageError
 from tonesim.explanation import WITHIN, Comparison, Explanation, Target, compare, explain
+from tonesim.measured import judge_table
 from tonesim.probe import Probe
 from tonesim.readings import FIGURES, FigureReading, Readings, read_readings
 from tonesim.sheet import check_sections, measure_sheet
@@ -382,6 +383,16 @@ def test_the_drive_a_closed_loop_settles_at_gives_its_output_back():
     circuit = lower(bench().design)
     point = static_point(circuit, 0.2, 15.0, 15.0)
     assert output_at_drive(circuit, point.v_d, (15.0, 15.0)) == pytest.approx(point.v_o, abs=1e-6)
+
+
+def test_a_row_whose_current_no_rail_can_give_is_not_reached():
+    weak = Bench(make_design({"supply": {"kind": "battery", "positive_v": 12, "internal_ohm": 4}}))
+    # 40 V into 8 ohm take 5 A, 20 V across the batteries' resistance.
+    table = judge_table("drive", (-50, -25, 0, 25, 50), (-40, -20, 0, 20, 40))
+    found = measure_against(weak, Readings("mine.csv", "curve", curve=table)).comparisons
+    assert [each.computed is None for each in found] == [True, False, False, False, True]
+    assert found[0].deviation is None
+    assert "does not reach" in found[0].verdict
 
 
 # Reading

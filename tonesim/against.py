@@ -293,6 +293,7 @@ def _row(variants: Variants, kind: str, row: tuple[float, float], most_v: float)
             return output_at_drive(circuit, driven, rails)
         return float(static_point(circuit, driven, *rails).v_o)
 
+    computed = model(None, 0.0)
     side: Side = "upper" if driven > 0.0 else "lower"
     if kind == "drive":
         candidates = [vbe(side), emitter(), supply(design), hfe(side), load()]
@@ -303,7 +304,7 @@ def _row(variants: Variants, kind: str, row: tuple[float, float], most_v: float)
         name=f"{kind} {format_quantity(driven, 'V')}",
         unit="V",
         measured=measured,
-        computed=model(None, 0.0),
+        computed=computed if math.isfinite(computed) else None,
         error=(0.0, _CURVE * most_v),
         model=model,
         candidates=candidates,
