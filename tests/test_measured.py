@@ -425,6 +425,13 @@ def test_a_table_is_read_however_it_was_typed(tmp_path, text):
     assert table.output_v == (-2.0, -1.4, -0.4, 0.4, 1.4, 2.0)
 
 
+def test_the_table_in_readme_is_one(tmp_path):
+    readme = (Path(__file__).parent.parent / "README.md").read_text()
+    table = read_table(written(tmp_path, readme.split("```csv\n")[1].split("```")[0]))
+    assert (table.kind, len(table.output_v)) == ("drive", 10)
+    assert table.still_rises == (False, False)
+
+
 BAD = {
     "empty": ("# nothing\n", ["is empty", "drive_v,output_v"]),
     "no header": (GOOD.partition("\n")[2], ["line 1", "'-3,-2'", "drive_v,output_v"]),
