@@ -369,6 +369,35 @@ def test_a_lone_drop_is_told_by_its_half():
     assert describe_chain(load_design("full-chain")) == "1N4148 + 2 BAT85"
 
 
+# Invented: a dead zone of 2 V, then nine tenths of the drive, clipped at 9 V.
+DRIVE = [-13.0, -12.0, -11.0, -2.0, -1.5, -1.0, 0.0, 1.0, 1.5, 2.0, 11.0, 12.0, 13.0]
+OUTPUT = [-9.0, -9.0, -9.0, -0.9, -0.45, 0.0, 0.0, 0.0, 0.45, 0.9, 9.0, 9.0, 9.0]
+
+
+def measured_bench(kind: str) -> Bench:
+    x, y = DRIVE, OUTPUT
+    if kind == "input_v":
+        x, y = [k / 23.0 for k in range(-12, 13)], [min(max(k, -9.0), 9.0) for k in range(-12, 13)]
+    rows = {kind: x, "output_v": y, "positive_v": 15.0, "load_ohm": 8.0}
+    return Bench(make_design({"bias": {}, "measured": rows}))
+
+
+def test_a_measured_curve_is_drawn_as_it_was_measured():
+    (curve,) = gain_curves(measured_bench("drive_v"))
+    assert curve.label == "as drawn (measured curve)"
+    told = np.interp(DRIVE[3:-3], curve.drive_v, curve.output_v)
+    # Its monotone rows are kept to a fraction of a millivolt, between steps of 1/32 V of drive.
+    np.testing.assert_allclose(told, OUTPUT[3:-3], atol=5e-3)
+    low, high = curve.dead_zone_v
+    assert 1.8 < high - low < 2.6
+
+
+def test_a_measured_closed_loop_tells_nothing_of_its_pair(tmp_path):
+    b, found = measure_sheet(measured_bench("input_v").design, ("idle", "square"))
+    written = draw_pictures(b, found, tmp_path)
+    assert {path.stem for path in written} == {"square-wave"}  # no curves, no temperatures
+
+
 # ---- sines and courses ----
 
 

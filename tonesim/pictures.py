@@ -206,8 +206,11 @@ def neighbours(design: Design) -> tuple[tuple[str, Design], ...]:
 
     A half with a multiplier gets the next lower or higher R1 of E24 (IEC 60063), one with drops
     loses its last or has it once more; a half without drops takes the other half's. What the
-    design refuses is left out, so that a stage without feed resistors has no neighbours.
+    design refuses is left out, so that a stage without feed resistors has no neighbours; nor has
+    a measured curve, which holds its chain.
     """
+    if design.measured is not None:
+        return ()
     found = []
     for more in (False, True):
         changes = {**_other_ratio(design, more), **_other_drops(design, more)}
@@ -274,6 +277,8 @@ def _other_drops(design: Design, more: bool) -> dict[str, Any]:
 
 def describe_chain(design: Design) -> str:
     """Chains in words: "1N4148 + 2 BAT85", both halves' where they differ."""
+    if design.measured is not None:
+        return "measured curve"
 
     def half(side: Side) -> str:
         multiplier = design.bias.multiplier_for(side)
@@ -290,8 +295,12 @@ def describe_chain(design: Design) -> str:
 def gain_curves(bench: Bench) -> tuple[Curve, ...]:
     """Curve of the chain as drawn, then those of its neighbours, on the rails of the first.
 
-    All drive the bench resistor.
+    All drive the bench resistor. A measured curve of the closed loop tells nothing of the pair
+    inside it: there is no curve then.
     """
+    measured = bench.design.measured
+    if measured is not None and measured.input_v is not None:
+        return ()
     held = held_of(bench)
     designs = ((f"as drawn ({describe_chain(bench.design)})", bench.design),)
     return tuple(

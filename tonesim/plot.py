@@ -291,10 +291,11 @@ def draw_pictures(
 ) -> tuple[Path, ...]:
     """Draw every picture the sections of a sheet allow, as SVG and PNG.
 
-    The static curves need no section and are always drawn. A section that was not measured has
-    no pictures: `idle` brings idle against temperature, `power` the burst, `distortion` both
-    sweeps, the zero crossings and the spectra, `square` and `power_up` their traces. What a sheet
-    holds is not measured again; traces and records, which no sheet keeps, are run here.
+    The static curves need no section and are drawn wherever the design knows its pair (see
+    `gain_curves`). A section that was not measured has no pictures: `idle` brings idle against
+    temperature, `power` the burst, `distortion` both sweeps, the zero crossings and the spectra,
+    `square` and `power_up` their traces. What a sheet holds is not measured again; traces and
+    records, which no sheet keeps, are run here.
 
     Parameters
     ----------
@@ -325,11 +326,11 @@ def _static(bench: Bench, sheet: Sheet) -> Jobs:
     held = held_of(bench)
     curves = gain_curves(bench)
     clips = (bench.rest.upper.clip, bench.rest.lower.clip)
-    jobs: Jobs = {
-        "transfer-curve": lambda: draw_transfer(curves[0], clips, held),
-        "small-signal-gain": lambda: draw_gain(curves, held),
-    }
-    if (idle := sheet.idle) is not None:
+    jobs: Jobs = {}
+    if curves:
+        jobs["transfer-curve"] = lambda: draw_transfer(curves[0], clips, held)
+        jobs["small-signal-gain"] = lambda: draw_gain(curves, held)
+    if (idle := sheet.idle) is not None and idle.apart:
         chain_c = bench.design.bias.temperature_c
         jobs["idle-against-temperature"] = lambda: draw_idle(idle, chain_c, held)
     return jobs
