@@ -261,7 +261,7 @@ def test_figures_are_those_of_check_and_of_the_fine_bench(changes, rel):
     design = make_design(changes)
     found = measure_build(design, conditions_for(design)).figures
     check = check_design(design)
-    assert found.idle_a == min(check.upper.idle_a, check.lower.idle_a)
+    assert found.idle_a == max(min(check.upper.idle_a, check.lower.idle_a), 0.0)
     assert found.offset_v == check.output_offset_v
     assert found.gain == check.gain
     assert found.clip_upper_v == check.upper.clip.level_v
@@ -294,6 +294,13 @@ def test_who_goes_further_than_expected_is_measured_again_on_the_whole():
     again = measure_build(design, short)
     assert again.evidence.measured_twice == 1
     assert again.figures == whole.figures
+
+
+def test_a_half_that_an_offset_turns_off_idles_at_nothing():
+    design = make_design({**UNBIASED, "driver.offset_v": 0.005})
+    check = check_design(design)
+    assert min(check.upper.idle_a, check.lower.idle_a) < 0.0  # what leaks back through its base
+    assert measure_build(design, Conditions(0.1, 0.01)).figures.idle_a == 0.0
 
 
 # Spreads

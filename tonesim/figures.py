@@ -33,8 +33,9 @@ class Figures:
     """Figures of one build.
 
     `idle_a` flows through both halves: the lesser of their two currents, for the other one also
-    feeds the load with what the offset takes. Clip levels are static, with their signs; distortion
-    is that of a sine 3 dB and 40 dB below the design's clip point, into the rated resistance.
+    feeds the load with what the offset takes; zero where a half is off. Clip levels are static,
+    with their signs; distortion is that of a sine 3 dB and 40 dB below the design's clip point,
+    into the rated resistance.
     """
 
     idle_a: float
@@ -138,7 +139,7 @@ def measure_build(design: Design, conditions: Conditions) -> Measured:
         return distortion_of(tone, BASE_RATE_HZ * MULTIPLY).thd_percent
 
     figures = Figures(
-        idle_a=min(idle.upper_current_a, idle.lower_current_a),
+        idle_a=max(min(idle.upper_current_a, idle.lower_current_a), 0.0),
         offset_v=idle.output_v,
         gain=gain,
         clip_upper_v=above.level_v,

@@ -32,8 +32,8 @@ def show_spread(report: SpreadReport) -> None:
     print_line(
         f"Distortion: {TONE_HZ:g} Hz at {format_quantity(report.loud_peak_v, 'V')} and "
         f"{format_quantity(report.quiet_peak_v, 'V')} peak at the op-amp's input, the same for all "
-        "builds. Shares: squared rank correlations (Spearman); all parts: adjusted regression on "
-        "ranks."
+        "builds. Shares: squared rank correlations (Spearman); a part without influence has "
+        f"{100.0 * report.chance:.1g} % by chance; all parts: adjusted regression on ranks."
     )
     print_line(
         f"Left over at the nodes {evidence.residual_a:.1e} A, steps that did not settle "
@@ -70,7 +70,8 @@ def _ranking_row(ranking: Ranking) -> list[str]:
 
 
 def _percent(share: float) -> str:
-    return f"{100.0 * share:.0f} %"
+    """Shares of a few builds may add up to more than there is, by chance."""
+    return f"{100.0 * min(share, 1.0):.0f} %"
 
 
 def _tolerance_rows(report: SpreadReport) -> list[tuple[str, str]]:
