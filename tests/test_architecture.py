@@ -93,10 +93,14 @@ RANKS: dict[str, int] = {
     "render": 13,
     "audition": 14,
     "demo": 14,
-    "show": 17,
-    "showspread": 18,
-    "cli": 19,
-    "__main__": 20,
+    "show": 18,
+    "showspread": 19,
+    "hearing": 17,
+    "command": 19,
+    "cliaudible": 20,
+    "clibench": 20,
+    "cli": 21,
+    "__main__": 22,
 }
 # Which modules may import a library; "kernel" stands for everything in that folder.
 DOORS: dict[str, set[str]] = {
@@ -108,7 +112,7 @@ DOORS: dict[str, set[str]] = {
     "pyloudnorm": set(),  # cannot stream; the tests hold `level` against it
     "matplotlib": {"paper"},
     "rich": {"show"},
-    "click": {"cli", "__main__"},
+    "click": {"cli", "cliaudible", "clibench", "command", "__main__"},
     "scipy": {
         "bench",
         "cabinet",

@@ -65,8 +65,12 @@ The modules, in the order in which one may import another (never the other way r
 - `tonesim.report`: what a render is asked for and tells, and where its files may go
 - `tonesim.render`: a recording through a design into a file
 - `tonesim.demo`: the shipped recordings through three presets, and what to listen for
+- `tonesim.audition`: a recording through a design and its twins, heard
+- `tonesim.hearing`: what an audition found, as tables
 - `tonesim.show`: text on the terminal
 - `tonesim.showspread`: the spread of many builds on the terminal
+- `tonesim.command`: what every command shares
+- `tonesim.clibench`, `tonesim.cliaudible`: commands of the bench and of the ear
 - `tonesim.cli`: the command line
 
 Nothing is imported here, so that the command line answers at once.

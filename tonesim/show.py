@@ -14,9 +14,11 @@ from rich.progress import BarColumn, Progress, TextColumn, TimeRemainingColumn
 from rich.table import Table as Grid
 from rich.text import Text
 
+from tonesim.audition import Audition
 from tonesim.catalogue import CabinetShape, Diode, Loudspeaker, OpAmp, Part, Transistor, diode_drop
 from tonesim.check import HalfAtRest, StageCheck
 from tonesim.demo import DemoReport, Heard
+from tonesim.hearing import verdict_tables
 from tonesim.render import CEILING_DBTP
 from tonesim.report import RenderReport
 from tonesim.sheet import Sheet
@@ -246,13 +248,7 @@ def show_sheet(sheet: Sheet, found: Sequence[Table]) -> None:
             section = table.section
             print_line()
             print_line(section.upper())
-        rows = [
-            [shown(value, unit) for value, (_, unit) in zip(row, table.columns, strict=True)]
-            for row in table.rows
-        ]
-        print_table(table.title, [heading for heading, _ in table.columns], rows)
-        for note in table.notes:
-            print_line(f"  {note}")
+        _print_values(table)
     print_line()
     for caution in sheet.rest.cautions:
         print_line(f"Caution: {caution}")
@@ -266,6 +262,48 @@ def show_sheet(sheet: Sheet, found: Sequence[Table]) -> None:
         "reservoirs hold charge, heat sinks burn; a current-limited supply and a resistor first, "
         "the loudspeaker last."
     )
+
+
+def show_auditions(found: Sequence[Audition]) -> None:
+    """Print the verdicts, where they come from, and what deserves a doubt."""
+    first = found[0]
+    room = (
+        "no room noise"
+        if first.listening.room_dba is None
+        else (f"{first.listening.room_dba:g} dBA of room noise")
+    )
+    cabinet = first.cabinet or "no cabinet (a guitar loudspeaker hides more)"
+    print_line(f"{first.title} ({first.design_key_sha256[:12]})")
+    print_line(
+        f"Heard through {cabinet}, {first.listening.sine_spl_db:g} dB SPL for a sine of 1 V peak, "
+        f"{room}."
+    )
+    print_line(
+        f"Idle current {format_quantity(first.idle_a, 'A')}; the twin without a dead zone idles on "
+        f"{format_quantity(first.twin_idle_a, 'A')}."
+    )
+    for each in found:
+        for table in verdict_tables(each):
+            print_line()
+            _print_values(table)
+        for note in dict.fromkeys((*each.bias.audibility.notes, *each.everything.audibility.notes)):
+            print_line(f"  {note}")
+        if each.unsettled_steps:
+            print_line(
+                f"Caution: {each.unsettled_steps} step(s) of the computation did not settle; the "
+                "verdict is in doubt."
+            )
+
+
+def _print_values(table: Table) -> None:
+    """Print a table of values with its notes."""
+    rows = [
+        [shown(value, unit) for value, (_, unit) in zip(row, table.columns, strict=True)]
+        for row in table.rows
+    ]
+    print_table(table.title, [heading for heading, _ in table.columns], rows)
+    for note in table.notes:
+        print_line(f"  {note}")
 
 
 def _transistor_row(part: Transistor) -> Row:

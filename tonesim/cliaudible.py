@@ -1,0 +1,132 @@
+"""The command that asks the ear."""
+
+from __future__ import annotations
+
+from pathlib import Path
+from typing import TYPE_CHECKING, Any
+
+import click
+
+from tonesim.command import (
+    as_json_option,
+    check_text_output,
+    commands,
+    design_options,
+    find_recording,
+    load,
+    played,
+    print_json,
+    quantity,
+    warn_of_compiling,
+)
+from tonesim.errors import UsageError
+
+if TYPE_CHECKING:
+    from tonesim.audition import Audition
+    from tonesim.design import Design
+    from tonesim.ear import Listening
+
+
+@commands.command(
+    epilog="\b\nExample:\n  tonesim audible quiet_picking -d partial-chain --cabinet open-back-12"
+)
+@click.argument("recordings", metavar="RECORDING...", nargs=-1, required=True)
+@click.option(
+    "-d", "--design", "source", metavar="DESIGN", required=True, help="Design file, or a preset."
+)
+@design_options
+@click.option(
+    "--spl",
+    metavar="DB",
+    default="82",
+    show_default=True,
+    help="Level at your ears of a sine of 1 V peak across the load, dB SPL; 82 is a loudspeaker "
+    "of 100 dB (1 W, 1 m) heard at 2 m.",
+)
+@click.option(
+    "--room",
+    metavar="DBA",
+    default="30",
+    show_default=True,
+    help="Steady noise of the room, or none.",
+)
+@click.option("--channel", type=int, metavar="N", help="Only this channel, counted from 1.")
+@click.option(
+    "--cabinet",
+    metavar="CABINET",
+    help="A cabinet of the catalogue, an impulse response file, or none; by default the design's.",
+)
+@click.option(
+    "--full-scale", metavar="VOLTS", help="Peak volts at the jack that 0 dBFS stands for."
+)
+@click.option("--gain", metavar="DB", help="Clean gain before the stage, on top of the design's.")
+@click.option("--csv", "csv_file", metavar="FILE", help="Write every frame, a line each.")
+@click.option("--repair", is_flag=True, help="Replace samples that are not finite by zero.")
+@as_json_option
+def audible(
+    recordings: tuple[str, ...],
+    source: str,
+    changes: tuple[str, ...],
+    parts_file: str | None,
+    spl: str,
+    room: str,
+    channel: int | None,
+    csv_file: str | None,
+    repair: bool,
+    as_json: bool,
+    **given: Any,
+) -> None:
+    """Say whether a design's distortion is audible on a recording.
+
+    Each RECORDING is played through the design and through two twins of it: one without the dead
+    zone, so that what lies between them is what the choice of bias adds, and a linear one, so
+    that what lies between them is all distortion. Two models of the ear judge the difference
+    frame by frame: a strict one may say inaudible, a lenient one audible; between them you listen.
+    """
+    from tonesim.ear import Listening
+
+    if channel is not None and channel < 1:
+        raise UsageError(f"--channel is {channel}, channels are counted from 1")
+    listening = Listening(
+        quantity("--spl", spl, "dB"),
+        None if room.lower() == "none" else quantity("--room", room, "dB"),
+    )
+    paths = [find_recording(name) for name in recordings]
+    if csv_file is not None:
+        check_text_output(csv_file, (source, parts_file, *map(str, paths)))
+    design, catalogue = load(source, changes, parts_file)
+    design = played(design, catalogue, given)
+    found = _audition_all(paths, design, listening, channel, repair)
+    if csv_file is not None:
+        from tonesim.hearing import frames_csv
+        from tonesim.wav import write_text_aside
+
+        write_text_aside(csv_file, frames_csv(found))
+    if as_json:
+        print_json({"auditions": [each.as_dict() for each in found]})
+        return
+    from tonesim.show import show_auditions
+
+    show_auditions(found)
+
+
+def _audition_all(
+    paths: list[Path], design: Design, listening: Listening, channel: int | None, repair: bool
+) -> list[Audition]:
+    from tonesim.audition import audition
+    from tonesim.report import RenderOptions
+    from tonesim.show import progress_bars
+    from tonesim.wav import open_recording
+
+    options = RenderOptions(channel=None if channel is None else channel - 1, repair=repair)
+    lengths = []
+    for path in paths:  # all that can be seen before the work begins
+        with open_recording(path, repair=repair) as recording:
+            lengths.append(recording.info.frames)
+    warn_of_compiling()
+    found: list[Audition] = []
+    with progress_bars(sum(lengths)) as begin:
+        for path, frames in zip(paths, lengths, strict=True):
+            with open_recording(path, repair=repair) as recording:
+                found += audition(recording, design, listening, options, begin(path.name, frames))
+    return found
