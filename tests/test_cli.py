@@ -18,12 +18,13 @@ import soundfile as sf
 from click.testing import CliRunner, Result
 
 import tonesim
-from tonesim.cli import INTERRUPTED, commands
+from tonesim.cli import commands
+from tonesim.command import INTERRUPTED
 from tonesim.designfile import build_design, list_presets, load_design
 
 RATE = 48_000
 ROOT = Path(tonesim.__file__).parent.parent  # of the package under test, installed or not
-ALL = ("render", "check", "parts", "presets", "demo", "spread")
+ALL = ("render", "check", "parts", "presets", "demo", "spread", "bench", "audible")
 
 
 def invoke(*args: object) -> Result:

@@ -7,7 +7,8 @@ from pathlib import Path
 import pytest
 from click.testing import CliRunner, Result
 
-from tonesim.cli import INTERRUPTED, commands
+from tonesim.cli import commands
+from tonesim.command import INTERRUPTED
 from tonesim.designfile import presets_folder
 from tonesim.errors import DesignError, OutputError, SolverError, UsageError
 from tonesim.sheet import SECTIONS
