@@ -115,7 +115,7 @@ def _percent(points: Sequence[DistortionPoint], *, noise: bool = False) -> Signa
 
 def _doubts(points: Sequence[DistortionPoint], floor_db: float) -> str:
     """What the figures stand on, and how many of them had not settled."""
-    told = f" The computation's own error is {minus(f'{floor_db:.0f}')} dB of a full sine."
+    told = f" Beside harmonics the computation leaves {minus(f'{floor_db:.0f}')} dB of a full sine."
     count = sum(not point.steady for point in points)
     return told + (f" {count} of {len(points)} points were not steady." if count else "")
 
