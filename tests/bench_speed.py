@@ -1,7 +1,8 @@
 """Speed, as ratios in one run: `python tests/bench_speed.py`. Not collected by pytest.
 
 Prints, for every preset, the real-time factor of the whole stage and the share of each link of
-the chain; then what a surface costs, and how the stage compares with a general integrator.
+the chain; then what a surface and a bench sheet cost, and how the stage compares with a general
+integrator.
 One core, 48 kHz, real time = 1. Machines are noisy: compare rows of one run only.
 """
 
@@ -21,6 +22,7 @@ from tonesim.kernel.front import SIZE, advance_front
 from tonesim.masking import MaskingMeter
 from tonesim.oversample import Oversampler
 from tonesim.processor import Amplifier
+from tonesim.sheet import measure_sheet
 from tonesim.wav import open_recording
 
 RATE, BLOCK = 48_000, 1024
@@ -140,6 +142,24 @@ def against_integrator(name: str) -> str:
     return f"{name:<28}{1.0 / ours:>8.1f}{seconds / ida:>10.4f}{ida / seconds / ours:>10.0f}"
 
 
+def reference_seconds(x: np.ndarray) -> float:
+    """What one second of the recording costs through the full chain: the yardstick of a sheet."""
+    design = load_design("full-chain")
+    stage = Amplifier(design)
+    stage.prepare(RATE, BLOCK)
+    volts = x * design.input.full_scale_v
+    return seconds_for(blocks(volts, stage.process)) / (x.size / RATE)
+
+
+def sheet_row(name: str, yardstick_s: float) -> str:
+    """A full bench sheet, on all cores: seconds, and how much playing they stand for."""
+    design = load_design(name)
+    start = time.perf_counter()
+    _, sheet = measure_sheet(design)
+    took = time.perf_counter() - start
+    return f"{name:<28}{took:>8.1f} s{took / yardstick_s:>10.0f} s{sheet.unsettled_steps:>10d}"
+
+
 def main() -> None:
     parser = argparse.ArgumentParser(description=__doc__.splitlines()[0])
     parser.add_argument("--seconds", type=float, default=8.0, help="stretch of recording to run")
@@ -159,6 +179,10 @@ def main() -> None:
     print(f"\n{'both models of the ear':<28}{'x real':>8}{'replay':>10}")
     for rate in (48_000, 44_100, 96_000):
         print(ear_row(f"recording at {rate} Hz", x, rate), flush=True)
+    yardstick = reference_seconds(x)
+    print(f"\n{'full bench sheet':<28}{'takes':>10}{'of playing':>12}{'unsettled':>10}")
+    for name in ("single-pair-current-limit", "no-chain", "full-chain"):
+        print(sheet_row(name, yardstick), flush=True)
     print(f"\n{'1 kHz sine, loudspeaker':<28}{'x real':>8}{'IDA':>10}{'ratio':>10}")
     print(against_integrator("partial chain"))
 

@@ -124,6 +124,17 @@ def test_a_smaller_feed_resistor_raises_a_starved_level():
     assert levels[-1] > 1.1 * levels[0]
 
 
+def test_a_hopelessly_starved_chain_is_read_in_reverse():
+    # A megohm feeds nothing: the op-amp swings to 12 V and the chain meets them in reverse, where
+    # a 1N4148 leaks nanoamperes (data sheet: 25 nA at 20 V).
+    feed = {"feed_ohm": "1M", "upper": [SILICON], "lower": [SILICON]}
+    half = halves(make_design({"bias": feed}))["upper"]
+    assert half.cause == "base starvation"
+    assert half.level_v < 0.1
+    found = limit(half, "base starvation")
+    assert found.available == pytest.approx(found.used, abs=50e-9)
+
+
 # ---- driver ----
 
 

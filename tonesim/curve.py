@@ -424,5 +424,8 @@ def chain_voltage(half: HalfParams, current_a: float) -> float:
     def gap(x: float) -> float:
         return float(chain_law(x, half)[2]) - current_a
 
-    x = brentq(gap, -5.0, 5.0, xtol=1e-12)
+    low = -5.0
+    while gap(low) > 0.0 and low > -1e3:
+        low *= 2.0  # starved, a chain meets most of the rail in reverse
+    x = brentq(gap, low, 5.0, xtol=1e-12)
     return float(chain_law(x, half)[0])
