@@ -99,6 +99,9 @@ def test_any_cut_gives_the_same_residual(taps):
         np.testing.assert_allclose(
             np.concatenate([part[k] for part in parts]), whole[k], atol=1e-12
         )
+    rest = stage.finish()
+    assert rest[0].size == x.size - whole[0].size
+    np.testing.assert_array_equal(np.concatenate([whole[1], rest[1]]), y)
     left = whole[1] - whole[0]
     share = 10.0 * math.log10(float(left @ left) / float(whole[1] @ whole[1]))
     assert share == pytest.approx(match.residual_db, abs=1e-6)

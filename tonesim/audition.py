@@ -294,8 +294,11 @@ def _compare(
     match = fit.finish()
     stage = LinearStage(fit, match)
     meter = MaskingMeter(sample_rate, listening, keep_bands=search)
-    for before, after in zip(pair[0].blocks(), pair[1].blocks(), strict=True):
-        fair, heard = stage.process(before, after)
+    matched = itertools.chain(
+        (stage.process(*blocks) for blocks in zip(*(t.blocks() for t in pair), strict=True)),
+        (stage.finish() for _ in range(1)),
+    )
+    for fair, heard in matched:
         meter.add(fair, heard)
         if tap is not None:
             tap(Residual(fair, heard - fair))

@@ -91,7 +91,8 @@ class LinearFit:
         main = r[:, self._pre]
         power = float(main @ main)
         if total <= _SILENT or power <= _SILENT:
-            return LinearMatch(1.0, (1.0, *[0.0] * (n - 1)), -math.inf, -math.inf, 1.0, 0)
+            alone = tuple(1.0 if k == self._pre else 0.0 for k in range(n))
+            return LinearMatch(1.0, alone, -math.inf, -math.inf, 1.0, 0)
         gain = float(main @ r[:, n]) / power
         left = r[:, n] - gain * main
         if n == 1:
@@ -128,6 +129,11 @@ class LinearStage:
         columns, kept = self._columns.of(reference, test)
         return columns @ self._coefficients, kept
 
+    def finish(self) -> tuple[Signal, Signal]:
+        """Give what is still owed, as if silence followed."""
+        silence = np.zeros(self._columns.ahead)
+        return self.process(silence, silence)
+
 
 class _Columns:
     """Columns of the fit for successive blocks: shifted copies and slow low-passes."""
@@ -140,12 +146,19 @@ class _Columns:
         self._states = [np.zeros(1) for _ in decays]
         self._lead = pre
 
+    @property
+    def ahead(self) -> int:
+        """Samples a row waits for."""
+        return self._pre
+
     def of(self, reference: Signal, test: Signal) -> tuple[npt.NDArray[np.float64], Signal]:
         """Columns (frames, taps + poles) and the test samples that belong to them."""
         if reference.shape != test.shape or reference.ndim != 1:
             raise UsageError(
                 f"reference {reference.shape} and test {test.shape}, expected equal (frames,)"
             )
+        if reference.size == 0:
+            return np.zeros((0, self._taps + len(self._decays))), np.zeros(0)
         x = np.concatenate([self._past, reference])
         self._past = x[x.size - (self._taps - 1) :] if self._taps > 1 else x[:0]
         n = reference.size
