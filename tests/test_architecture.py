@@ -92,6 +92,7 @@ RANKS: dict[str, int] = {
     "report": 12,
     "render": 13,
     "audition": 14,
+    "settle": 15,
     "demo": 14,
     "show": 18,
     "showspread": 19,

@@ -24,7 +24,7 @@ from tonesim.designfile import build_design, list_presets, load_design
 
 RATE = 48_000
 ROOT = Path(tonesim.__file__).parent.parent  # of the package under test, installed or not
-ALL = ("render", "check", "parts", "presets", "demo", "spread", "bench", "audible")
+ALL = ("render", "check", "parts", "presets", "demo", "spread", "bench", "audible", "settle")
 
 
 def invoke(*args: object) -> Result:

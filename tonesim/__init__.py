@@ -66,7 +66,8 @@ The modules, in the order in which one may import another (never the other way r
 - `tonesim.render`: a recording through a design into a file
 - `tonesim.demo`: the shipped recordings through three presets, and what to listen for
 - `tonesim.audition`: a recording through a design and its twins, heard
-- `tonesim.hearing`: what an audition found, as tables
+- `tonesim.settle`: the least bias that hides the crossover
+- `tonesim.hearing`: what an audition or a ladder found, as tables
 - `tonesim.show`: text on the terminal
 - `tonesim.showspread`: the spread of many builds on the terminal
 - `tonesim.command`: what every command shares

@@ -80,7 +80,7 @@ class Comparison:
 
 @dataclass(frozen=True)
 class Audition:
-    """Both answers for one channel of a recording.
+    """The answers for one channel of a recording; `everything` is None where it was not asked.
 
     `shift_v` and `twin_idle_a` are those of the twin without a dead zone; `evidence` is the
     solver's for design, that twin, and the linear one.
@@ -93,15 +93,15 @@ class Audition:
     listening: Listening
     cabinet: str | None
     bias: Comparison
-    everything: Comparison
+    everything: Comparison | None
     idle_a: float
     twin_idle_a: float
     shift_v: float
-    evidence: tuple[Evidence, Evidence, Evidence]
+    evidence: tuple[Evidence, ...]
 
     @property
     def unsettled_steps(self) -> int:
-        """Steps of all three stages that did not settle."""
+        """Steps of all stages that did not settle."""
         return sum(each.unsettled_steps for each in self.evidence)
 
     def as_dict(self) -> dict[str, Any]:
@@ -115,7 +115,7 @@ class Audition:
             "room_dba": self.listening.room_dba,
             "cabinet": self.cabinet,
             "bias": self.bias.as_dict(),
-            "all_distortion": self.everything.as_dict(),
+            "all_distortion": None if self.everything is None else self.everything.as_dict(),
             "idle_a": self.idle_a,
             "twin_idle_a": self.twin_idle_a,
             "twin_shift_v": self.shift_v,
@@ -162,6 +162,7 @@ def audition(
     progress: Progress | None = None,
     *,
     search: bool = True,
+    everything: bool = True,
     tap: Callable[[Residual], None] | None = None,
 ) -> list[Audition]:
     """Play a recording through a design and both twins and listen to what lies between.
@@ -179,6 +180,8 @@ def audition(
         Takes the share that is done, 0 to 1; may raise to stop.
     search : bool
         Whether to look for the playback levels at which the verdicts turn.
+    everything : bool
+        Whether to ask for all distortion too, which takes the linear twin.
     tap : callable, optional
         Takes the residual of the bias, block by block, for one channel.
 
@@ -199,7 +202,7 @@ def audition(
     builders: tuple[Callable[[Design], Stage], ...] = (
         build_stage,
         lambda _: free.stage,
-        lambda d: linear(build_stage(d)),
+        *((lambda d: linear(build_stage(d)),) if everything else ()),
     )
     info = recording.info
     channels = channels_of(info, options)
@@ -231,27 +234,25 @@ def audition(
         found = []
         for channel in range(channels):
             start = _PLAY_SHARE + (1.0 - _PLAY_SHARE) * channel / channels
-            own, without, straight = takes[channel]
+            own, without = takes[channel][:2]
             bias = _compare(
                 _BIAS,
                 "twin without a dead zone",
                 (without, own),
-                info.sample_rate,
-                listening,
-                taps=1,
-                search=search,
-                tap=tap,
+                MaskingMeter(info.sample_rate, listening, keep_bands=search),
+                LinearFit(info.sample_rate),
+                tap,
             )
             tell(start + 0.5 * (1.0 - _PLAY_SHARE) / channels)
-            everything = _compare(
-                _ALL,
-                "linear twin",
-                (straight, own),
-                info.sample_rate,
-                listening,
-                taps=LINEAR_TAPS,
-                search=search,
-            )
+            whole = None
+            if everything:
+                whole = _compare(
+                    _ALL,
+                    "linear twin",
+                    (takes[channel][2], own),
+                    MaskingMeter(info.sample_rate, listening, keep_bands=search),
+                    LinearFit(info.sample_rate, LINEAR_TAPS),
+                )
             tell(start + (1.0 - _PLAY_SHARE) / channels)
             found.append(
                 Audition(
@@ -262,15 +263,11 @@ def audition(
                     listening=listening,
                     cabinet=_cabinet_name(design),
                     bias=bias,
-                    everything=everything,
+                    everything=whole,
                     idle_a=_idle(voices[channel][0]),
                     twin_idle_a=free.idle_a,
                     shift_v=free.shift_v,
-                    evidence=(
-                        voices[channel][0].stage.evidence,
-                        voices[channel][1].stage.evidence,
-                        voices[channel][2].stage.evidence,
-                    ),
+                    evidence=tuple(voice.stage.evidence for voice in voices[channel]),
                 )
             )
     return found
@@ -280,20 +277,15 @@ def _compare(
     question: str,
     reference: str,
     pair: tuple[Take, Take],
-    sample_rate: int,
-    listening: Listening,
-    *,
-    taps: int,
-    search: bool,
+    meter: MaskingMeter,
+    fit: LinearFit,
     tap: Callable[[Residual], None] | None = None,
 ) -> Comparison:
     """Match a reference to the take of the design, and listen to the difference."""
-    fit = LinearFit(sample_rate, taps)
     for before, after in zip(pair[0].blocks(), pair[1].blocks(), strict=True):
         fit.update(before, after)
     match = fit.finish()
     stage = LinearStage(fit, match)
-    meter = MaskingMeter(sample_rate, listening, keep_bands=search)
     matched = itertools.chain(
         (stage.process(*blocks) for blocks in zip(*(t.blocks() for t in pair), strict=True)),
         (stage.finish() for _ in range(1)),
@@ -308,7 +300,7 @@ def _compare(
         reference=reference,
         match=match,
         audibility=assess(series),
-        levels=search_level(meter) if search else None,
+        levels=search_level(meter) if meter.keeps_bands else None,
         series=series,
     )
 

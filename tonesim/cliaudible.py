@@ -25,6 +25,7 @@ if TYPE_CHECKING:
     from tonesim.audition import Audition
     from tonesim.design import Design
     from tonesim.ear import Listening
+    from tonesim.settle import Candidate
 
 
 @commands.command(
@@ -108,6 +109,117 @@ def audible(
     from tonesim.show import show_auditions
 
     show_auditions(found)
+
+
+@commands.command(
+    epilog="\b\nExamples:\n  tonesim settle quiet_picking -d full-chain --drop 1N4148 --most 2\n"
+    "  tonesim settle quiet_picking -d vbe-multiplier --key "
+    "bias.multiplier.collector_base_ohm --between 3k3 5k1"
+)
+@click.argument("recordings", metavar="RECORDING...", nargs=-1, required=True)
+@click.option(
+    "-d", "--design", "source", metavar="DESIGN", required=True, help="Design file, or a preset."
+)
+@design_options
+@click.option(
+    "--drop",
+    "drops",
+    metavar="NAME",
+    multiple=True,
+    help="A drop to build chains of; several make mixes. By default the first of the design's.",
+)
+@click.option("--most", type=int, default=3, show_default=True, help="Drops of a half at most.")
+@click.option(
+    "--chain",
+    "chains",
+    metavar="DROPS",
+    multiple=True,
+    help="Try just these: 1N4148,1N4148 for both halves, 1N4148,BAT85/1N4148 apart, or none.",
+)
+@click.option("--key", metavar="KEY", help="Settle this value instead, along the E24 series.")
+@click.option("--between", metavar="LOW HIGH", nargs=2, help="Range of the value, as in 1k 3k3.")
+@click.option("--spl", metavar="DB", default="82", show_default=True, help="As for audible.")
+@click.option("--room", metavar="DBA", default="30", show_default=True, help="As for audible.")
+@click.option("--cabinet", metavar="CABINET", help="As for audible.")
+@click.option("--full-scale", metavar="VOLTS", help="As for audible.")
+@click.option("--gain", metavar="DB", help="As for audible.")
+@click.option("--save", "saved", metavar="FILE", help="Write the chosen design.")
+@as_json_option
+def settle(
+    recordings: tuple[str, ...],
+    source: str,
+    changes: tuple[str, ...],
+    parts_file: str | None,
+    spl: str,
+    room: str,
+    saved: str | None,
+    as_json: bool,
+    **given: Any,
+) -> None:
+    """Find the least bias that hides the crossover on all recordings.
+
+    Chains of drops, from none to --most a half, are each played on every RECORDING, and the ear
+    says what the bias adds (see audible). With --key a single value is settled along the E24
+    series instead, by halving. Printed is the ladder with idle current, heat, distortion and
+    margin of every rung, the least that suffices, its neighbours, and what heat does to it.
+    """
+    from tonesim.ear import Listening
+    from tonesim.settle import climb, halve
+
+    listening = Listening(
+        quantity("--spl", spl, "dB"),
+        None if room.lower() == "none" else quantity("--room", room, "dB"),
+    )
+    paths = [find_recording(name) for name in recordings]
+    if saved is not None:
+        check_text_output(saved, (source, parts_file, *map(str, paths)))
+    design, catalogue = load(source, changes, parts_file)
+    design = played(design, catalogue, given)
+    candidates = _candidates(design, given)
+    warn_of_compiling()
+    from tonesim.show import progress_bars, show_settled
+
+    search = climb if given["key"] is None else halve
+    with progress_bars(1000) as begin:
+        found = search(design, candidates, paths, listening, progress=begin("settle", 1000))
+    if saved is not None and found.chosen is not None:
+        from tonesim.designfile import design_to_toml
+        from tonesim.wav import write_text_aside
+
+        write_text_aside(saved, design_to_toml(found.chosen.design))
+    if as_json:
+        print_json(found.as_dict())
+        return
+    heard = f"Heard at {listening.sine_spl_db:g} dB SPL for a sine of 1 V peak, room noise {room}."
+    show_settled(design.title, heard, found)
+    if saved is not None:
+        click.echo(f"written: {saved}" if found.chosen else f"{saved} is not written")
+
+
+def _candidates(design: Design, given: dict[str, Any]) -> tuple[Candidate, ...]:
+    """Rungs of the ladder the options ask for."""
+    from tonesim.settle import chain_ladder, stated_chains, value_ladder
+    from tonesim.units import E24, preferred_between
+
+    key, between = given["key"], given["between"]
+    if (key is None) != (between is None):
+        raise UsageError("--key and --between belong together")
+    if key is not None:
+        low, high = (quantity("--between", text, "") for text in between)
+        values = preferred_between(low, high, E24)
+        if not values:
+            raise UsageError(f"no value of E24 lies between {between[0]} and {between[1]}")
+        return value_ladder(key, values)
+    if given["chains"]:
+        return stated_chains(given["chains"])
+    own = [drop.name for drop in (*design.bias.upper, *design.bias.lower)][:1]
+    drops = list(given["drops"]) or own
+    if not drops:
+        raise UsageError(
+            "the design has no drops: name one with --drop, or chains with --chain, or a value "
+            "with --key and --between"
+        )
+    return chain_ladder(design, drops, given["most"])
 
 
 def _audition_all(

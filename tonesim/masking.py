@@ -206,6 +206,11 @@ class MaskingMeter:
         self._kept: list[list[npt.NDArray[np.float32]]] | None = [] if keep_bands else None
         self._frames = 0
 
+    @property
+    def keeps_bands(self) -> bool:
+        """Whether the recording can be heard again."""
+        return self._kept is not None
+
     def add(self, reference: npt.ArrayLike, test: npt.ArrayLike) -> None:
         """Hear a block of each, shape ``(n,)``, in the unit of `Listening.sine_spl_db`.
 

@@ -18,9 +18,10 @@ from tonesim.audition import Audition
 from tonesim.catalogue import CabinetShape, Diode, Loudspeaker, OpAmp, Part, Transistor, diode_drop
 from tonesim.check import HalfAtRest, StageCheck
 from tonesim.demo import DemoReport, Heard
-from tonesim.hearing import verdict_tables
+from tonesim.hearing import ladder_tables, verdict_tables
 from tonesim.render import CEILING_DBTP
 from tonesim.report import RenderReport
+from tonesim.settle import Settled
 from tonesim.sheet import Sheet
 from tonesim.tables import Table, shown
 from tonesim.units import db_to_ratio, format_quantity, ratio_to_db
@@ -286,12 +287,40 @@ def show_auditions(found: Sequence[Audition]) -> None:
         for table in verdict_tables(each):
             print_line()
             _print_values(table)
-        for note in dict.fromkeys((*each.bias.audibility.notes, *each.everything.audibility.notes)):
+        asked = [each.bias] if each.everything is None else [each.bias, each.everything]
+        for note in dict.fromkeys(note for answer in asked for note in answer.audibility.notes):
             print_line(f"  {note}")
         if each.unsettled_steps:
             print_line(
                 f"Caution: {each.unsettled_steps} step(s) of the computation did not settle; the "
                 "verdict is in doubt."
+            )
+
+
+def show_settled(title: str, heard: str, found: Settled) -> None:
+    """Print a ladder and its answer."""
+    print_line(title)
+    print_line(heard)
+    for table in ladder_tables(found):
+        print_line()
+        _print_values(table)
+    print_line()
+    if found.chosen is None:
+        print_line("Nothing on this ladder hides the crossover on all recordings.")
+        return
+    chosen = found.chosen
+    print_line(
+        f"Least bias that hides it: {chosen.candidate.name}, idle current "
+        f"{format_quantity(chosen.idle_a, 'A')}, {format_quantity(chosen.idle_w, 'W')} of heat in "
+        "the pair."
+    )
+    place = found.rungs.index(chosen)
+    for other, words in ((place - 1, "One step less"), (place + 1, "One step more")):
+        if 0 <= other < len(found.rungs):
+            rung = found.rungs[other]
+            print_line(
+                f"{words}: {rung.candidate.name}, {format_quantity(rung.idle_a, 'A')}, "
+                f"{format_quantity(rung.idle_w, 'W')}, {rung.verdict}, {rung.margin_db:+.1f} dB."
             )
 
 

@@ -26,7 +26,7 @@ from tonesim.transient import PowerUpSheet, SquareSheet
 from tonesim.units import format_quantity
 
 _LEAST = 1e-9  # what is less is called so
-_MOST_RTH = 1e4  # K/W; what allows more allows any
+MOST_RTH = 1e4  # K/W; what allows more allows any
 _MOST_PERCENT = 1000.0  # a deviation beyond it is one of another kind
 _LEAST_GAIN_V = 1e-3  # a limit whose lifting brings less brings nothing
 _OF_ITS_OWN = ""  # unit of a column whose values bring their units along
@@ -209,7 +209,7 @@ def _idle(sheet: Sheet, idle: IdleSheet) -> Iterator[Table]:
 
 
 def _any_above(rth_k_per_w: float | None) -> Value:
-    return "any" if rth_k_per_w is None or rth_k_per_w > _MOST_RTH else rth_k_per_w
+    return "any" if rth_k_per_w is None or rth_k_per_w > MOST_RTH else rth_k_per_w
 
 
 def _currents(converged: bool, upper: float, lower: float) -> tuple[Value, Value]:

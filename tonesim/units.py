@@ -206,6 +206,26 @@ def format_quantity(value: float, unit: str, digits: int = 3) -> str:
     return f"{text} {'µ' if prefix == 'u' else prefix}{symbol}"
 
 
+def preferred_between(low: float, high: float, series: Sequence[float]) -> tuple[float, ...]:
+    """Values of a preferred series from `low` to `high`, both included, rising.
+
+    Examples
+    --------
+    >>> preferred_between(900.0, 1300.0, E24)
+    (910.0, 1000.0, 1100.0, 1200.0, 1300.0)
+    """
+    if not (math.isfinite(low) and math.isfinite(high) and 0.0 < low <= high):
+        return ()
+    first, last = math.floor(math.log10(low)), math.floor(math.log10(high))
+    edge = 1.0 + 1e-9
+    return tuple(
+        float(f"{step}e{decade}")
+        for decade in range(first, last + 1)
+        for step in series
+        if low / edge <= float(f"{step}e{decade}") <= high * edge
+    )
+
+
 def nearest_preferred(value: float, series: Sequence[float]) -> float:
     """Preferred value nearest by ratio, from a series such as `E12` (IEC 60063).
 
