@@ -209,10 +209,19 @@ def test_heavy_libraries_wait_until_they_are_needed():
     assert done.stdout.split() == []
 
 
-@pytest.mark.parametrize("name", sorted(set(RANKS) - {"__main__"}))
-def test_a_module_imports_alone(name):
-    code = f"import tonesim.{name}"
+def test_every_module_imports_alone():
+    """Each with none of ours loaded before it, warnings as errors; libraries stay loaded."""
+    names = sorted(set(RANKS) - {"__main__"})
+    code = (
+        "import importlib, sys\n"
+        f"for name in {names}:\n"
+        "    for old in [m for m in sys.modules if m.partition('.')[0] == 'tonesim']:\n"
+        "        del sys.modules[old]\n"
+        "    importlib.import_module(f'tonesim.{name}')\n"
+        "    print(name)\n"
+    )
     done = subprocess.run(
         [sys.executable, "-W", "error", "-c", code], capture_output=True, text=True, check=False
     )
     assert done.returncode == 0, done.stderr
+    assert done.stdout.split() == names
