@@ -302,8 +302,6 @@ def test_hum_at_idle_is_that_of_a_silent_run():
     spectrum = np.abs(np.fft.rfft(y - y.mean())) / y.size * math.sqrt(2.0)
     # Parseval.
     assert hum_at_idle(bench) == pytest.approx(float(np.sqrt(np.sum(spectrum**2))), abs=1e-12)
-    lopsided = Bench(load_design("small-saggy-transformer"))
-    assert hum_at_idle(lopsided) >= 0.0
 
 
 # ---- the sheet ----
