@@ -304,6 +304,19 @@ def test_hum_at_idle_is_that_of_a_silent_run():
     assert hum_at_idle(bench) == pytest.approx(float(np.sqrt(np.sum(spectrum**2))), abs=1e-12)
 
 
+def test_hum_at_full_output_is_the_mains_lines_and_its_sidebands():
+    sheet, _ = mains_sheet()
+    point = sheet.clip_point
+    tone = mains_bench().probe.twin().tone(((1000.0, point.input_peak_v),), 0.1)
+    lines = np.abs(np.fft.rfft(tone.output_v)) * 2.0 / tone.output_v.size
+    # Multiples of 50 Hz (5 cycles in the record), alone and around the tone, by plain numpy.
+    mains, first = 5 * np.arange(1, 21), tone.cycles[0]
+    hum = np.unique(np.concatenate([mains, first + mains, np.abs(first - mains)]))
+    rms = math.sqrt(float(np.sum(lines[hum] ** 2)) / 2.0)
+    assert sheet.hum_full_v == pytest.approx(rms, rel=1e-3)
+    assert rms > 1e-4  # crests just clip on rails that ripple
+
+
 # ---- the sheet ----
 
 
