@@ -9,6 +9,7 @@ from test_facts_of_the_trade import stage
 from tonesim.bench import Bench
 from tonesim.catalogue import OpAmp, load_catalogue
 from tonesim.design import Design
+from tonesim.power import PowerSheet, measure_power
 from tonesim.sheet import Sheet, measure_sheet
 
 SILICON = "1N4148"
@@ -74,6 +75,11 @@ def class_ab(**changes: Any) -> Design:
 @functools.cache
 def class_b_bench() -> Bench:
     return Bench(class_b())
+
+
+@functools.cache
+def class_b_power() -> PowerSheet:
+    return measure_power(class_b_bench())
 
 
 @functools.cache

@@ -8,21 +8,16 @@ import functools
 
 import numpy as np
 import pytest
-from bench_pieces import SILICON, class_b_bench
+from bench_pieces import SILICON, class_b_bench, class_b_power
 from conftest import make_design
 
 from tonesim.bench import Bench
 from tonesim.curve import idle_point
 from tonesim.heat import AMBIENT_C, MOST_RTH_SA, RTH_CS_K_PER_W, Cooling, HeatSheet, measure_heat
 from tonesim.idle import heated, idle_heat
-from tonesim.power import Heat, PowerSheet, measure_power
+from tonesim.power import Heat, PowerSheet
 
 TWO = [SILICON, SILICON]
-
-
-@functools.cache
-def class_b_power() -> PowerSheet:
-    return measure_power(class_b_bench())
 
 
 def with_heat(power: PowerSheet, watts: float, loudspeaker_w: float | None = None) -> PowerSheet:

@@ -12,7 +12,6 @@ from conftest import make_design
 from tonesim.check import check_design
 from tonesim.designfile import design_key, list_presets, load_design
 from tonesim.errors import SolverError, UsageError
-from tonesim.power import measure_power
 from tonesim.sheet import SECTIONS, check_sections, measure_sheet
 
 
@@ -85,12 +84,13 @@ def test_the_same_design_gives_the_same_bits():
 
 
 def test_heat_alone_measures_the_power_it_needs():
-    bench, sheet = measure_sheet(class_b(), ("heat",), ambient_c=55.0)
+    _, sheet = measure_sheet(class_b(), ("heat",), ambient_c=55.0)
     assert sheet.power is None
     assert sheet.heat is not None
     assert sheet.heat.ambient_c == 55.0
-    worst = measure_power(bench).worst
-    assert sheet.heat.devices[0].worst_w == pytest.approx(worst.upper_w, rel=1e-12)
+    # Boylestad & Nashelsky: Vcc^2 / (pi^2 RL) in each of a class B pair, see test_power.py.
+    worst = 24.0**2 / (math.pi**2 * 8.0)
+    assert sheet.heat.devices[0].worst_w == pytest.approx(worst, rel=0.01)
 
 
 def test_a_step_that_does_not_settle_anywhere_is_told(monkeypatch):
@@ -151,8 +151,9 @@ def test_json_holds_what_is_derived_too():
         sheet.distortion.by_level[0].harmonics.thd_percent
     )
     assert plain["clip"]["upper"]["limits"][0]["in_hand"] > 0.0
-    # Every field of every dataclass is there.
-    assert {field.name for field in dataclasses.fields(sheet)} == set(plain)
+    # Every field that was measured is there.
+    fields = {field.name for field in dataclasses.fields(sheet)}
+    assert {name for name in fields if getattr(sheet, name) is not None} == set(plain)
 
 
 # ---- presets ----
