@@ -114,7 +114,7 @@ def audible(
 @commands.command(
     epilog="\b\nExamples:\n  tonesim settle quiet_picking -d full-chain --drop 1N4148 --most 2\n"
     "  tonesim settle quiet_picking -d vbe-multiplier --key "
-    "bias.multiplier.collector_base_ohm --between 3k3 5k1"
+    "bias.multiplier.collector_base_ohm --between 560 820"
 )
 @click.argument("recordings", metavar="RECORDING...", nargs=-1, required=True)
 @click.option(
