@@ -35,6 +35,7 @@ from tonesim.wav import open_recording
 THD_LEVELS_DB = (-3.0, -40.0)  # below the clip level
 HOTTER_K = 50.0  # what the chosen bias is asked to bear
 MOST_CANDIDATES = 64
+RISE_DB = 0.5  # from rung to rung: less is the resolution of the ear models, no rise
 _TONE_HZ = 1000.0
 
 
@@ -117,8 +118,8 @@ class Hot:
 class Settled:
     """The ladder, in the order of idle current, and the least rung that suffices.
 
-    `monotone` says whether the margin never rises from rung to rung; where it does the answer is
-    still the first that suffices, and a note says so.
+    `monotone` says whether the margin never rises by half a decibel from rung to rung; where it
+    does, the answer is still the first that suffices, and a note says so.
     """
 
     rungs: tuple[Rung, ...]
@@ -332,7 +333,7 @@ def _settled(found: Sequence[Rung | Refused]) -> Settled:
         raise DesignError(f"no candidate makes a usable stage; the first: {refused[0].reason}")
     chosen = next((rung for rung in rungs if rung.suffices), None)
     margins = [rung.margin_db for rung in rungs]
-    monotone = all(after <= before + 1e-9 for before, after in itertools.pairwise(margins))
+    monotone = all(after <= before + RISE_DB for before, after in itertools.pairwise(margins))
     return Settled(
         rungs=tuple(rungs),
         refused=refused,
