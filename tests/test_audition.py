@@ -172,9 +172,28 @@ def test_the_command_prints_and_writes(folder, monkeypatch):
     assert told["unsettled_steps"] == 0
 
 
+def test_the_residual_is_written_with_its_boost(folder, monkeypatch):
+    monkeypatch.chdir(folder)
+    sf.write("half.wav", pluck(0.5), RATE, "DOUBLE")
+    asked = ["audible", "half.wav", "-d", "no-chain", "--residual"]
+    for name, boost in (("r0.wav", "0"), ("r20.wav", "20")):
+        shown = CliRunner().invoke(commands, [*asked, name, "--boost", boost])
+        assert shown.exit_code == 0, shown.output
+        assert f"boosted by {boost} dB, 0 sample(s) clipped" in shown.stdout
+    plain, rate = sf.read("r0.wav")
+    boosted, _ = sf.read("r20.wav")
+    assert (rate, plain.size) == (RATE, pluck(0.5).size)
+    assert np.std(plain) > 0.0
+    np.testing.assert_allclose(boosted, 10.0 * plain, atol=11.0 * 2.0**-24)  # 24 bits each
+    again = CliRunner().invoke(commands, [*asked, "r0.wav"])
+    assert again.exit_code == 13
+    assert "r0.wav exists" in again.output
+
+
 @pytest.mark.parametrize(
     ("more", "said"),
     [
+        (["--residual", "nowhere/r.wav"], "does not exist"),
         (["--spl", "loud"], "--spl"),
         (["--room", "quiet"], "--room"),
         (["--channel", "0"], "--channel is 0, channels are counted from 1"),

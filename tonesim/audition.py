@@ -23,18 +23,18 @@ from tonesim.audibility import Audibility, assess
 from tonesim.design import Design
 from tonesim.designfile import design_key
 from tonesim.ear import Listening
-from tonesim.errors import OutputError
+from tonesim.errors import OutputError, UsageError
 from tonesim.masking import FrameSeries, MaskingMeter
 from tonesim.match import LinearFit, LinearMatch, LinearStage
 from tonesim.playback import LevelSearch, search_level
 from tonesim.pool import Progress
 from tonesim.processor import Evidence
-from tonesim.render import Voice, channels_of, silence
+from tonesim.render import Voice, cabinet_response, channels_of, output_full_scale, silence
 from tonesim.report import RenderOptions
 from tonesim.signals import Signal
 from tonesim.stage import Stage, build_stage
 from tonesim.twin import crossover_free, linear
-from tonesim.wav import Recording
+from tonesim.wav import Recording, create_recording, open_recording
 
 SINE_SPL_DB = 82.0  # 100 dB at 1 W and 1 m, heard at 2 m: 81.9 dB for a sine of 1 V peak
 ROOM_DBA = 30.0  # a quiet room
@@ -271,6 +271,62 @@ def audition(
                 )
             )
     return found
+
+
+def write_residual(
+    recording_path: Path,
+    out: Path,
+    design: Design,
+    listening: Listening,
+    options: RenderOptions,
+    boost_db: float,
+    progress: Progress | None = None,
+) -> tuple[list[Audition], int]:
+    """Audition one channel and write what the bias adds, boosted, to listen to.
+
+    Parameters
+    ----------
+    recording_path, out : Path
+        The ending of `out` chooses the format; it must not exist.
+    design : Design
+    listening : Listening
+    options : RenderOptions
+    boost_db : float
+        On top of the full scale that a render of the design has.
+    progress : callable, optional
+
+    Returns
+    -------
+    auditions : list of Audition
+    clipped_samples : int
+        Samples that the boost took past full scale.
+
+    Raises
+    ------
+    UsageError
+        If the recording has several channels and none is chosen.
+    OutputError
+        If `out` exists or cannot be written.
+    """
+    if out.exists():
+        raise OutputError(f"{out} exists; a residual is written under a new name only")
+    with open_recording(recording_path, repair=options.repair) as recording:
+        info = recording.info
+        if channels_of(info, options) != 1:
+            raise UsageError(f"{recording_path} has {info.channels} channels: choose one")
+        scale = output_full_scale(design, cabinet_response(design, info.sample_rate))
+        factor = 10.0 ** (boost_db / 20.0) / scale
+        with create_recording(out, info.sample_rate, 1, options.subtype) as writer:
+            found = audition(
+                recording,
+                design,
+                listening,
+                options,
+                progress,
+                tap=lambda part: writer.write(factor * part.residual),
+            )
+            writer.close()
+            return found, writer.clipped_samples
 
 
 def _compare(

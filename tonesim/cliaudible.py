@@ -62,6 +62,14 @@ if TYPE_CHECKING:
 )
 @click.option("--gain", metavar="DB", help="Clean gain before the stage, on top of the design's.")
 @click.option("--csv", "csv_file", metavar="FILE", help="Write every frame, a line each.")
+@click.option(
+    "--residual",
+    metavar="OUT",
+    help="Write what the bias adds, to listen to; one recording, one channel.",
+)
+@click.option(
+    "--boost", metavar="DB", default="20", show_default=True, help="Gain of the residual's file."
+)
 @click.option("--repair", is_flag=True, help="Replace samples that are not finite by zero.")
 @as_json_option
 def audible(
@@ -73,6 +81,8 @@ def audible(
     room: str,
     channel: int | None,
     csv_file: str | None,
+    residual: str | None,
+    boost: str,
     repair: bool,
     as_json: bool,
     **given: Any,
@@ -84,7 +94,10 @@ def audible(
     that what lies between them is all distortion. Two models of the ear judge the difference
     frame by frame: a strict one may say inaudible, a lenient one audible; between them you listen.
     """
+    from tonesim.audition import write_residual
     from tonesim.ear import Listening
+    from tonesim.report import RenderOptions
+    from tonesim.show import progress_bars
 
     if channel is not None and channel < 1:
         raise UsageError(f"--channel is {channel}, channels are counted from 1")
@@ -95,9 +108,30 @@ def audible(
     paths = [find_recording(name) for name in recordings]
     if csv_file is not None:
         check_text_output(csv_file, (source, parts_file, *map(str, paths)))
+    if residual is not None:
+        check_text_output(residual, (source, parts_file, *map(str, paths)))
+        if len(paths) != 1:
+            raise UsageError(f"--residual takes one recording, found {len(paths)}")
+    gain_db = quantity("--boost", boost, "dB")
     design, catalogue = load(source, changes, parts_file)
     design = played(design, catalogue, given)
-    found = _audition_all(paths, design, listening, channel, repair)
+    said = ""
+    if residual is None:
+        found = _audition_all(paths, design, listening, channel, repair)
+    else:
+        options = RenderOptions(channel=None if channel is None else channel - 1, repair=repair)
+        warn_of_compiling()
+        with progress_bars(1000) as begin:
+            found, clipped = write_residual(
+                paths[0],
+                Path(residual),
+                design,
+                listening,
+                options,
+                gain_db,
+                begin(paths[0].name, 1000),
+            )
+        said = f"written: {residual}, boosted by {gain_db:g} dB, {clipped} sample(s) clipped"
     if csv_file is not None:
         from tonesim.hearing import frames_csv
         from tonesim.wav import write_text_aside
@@ -109,6 +143,8 @@ def audible(
     from tonesim.show import show_auditions
 
     show_auditions(found)
+    if said:
+        click.echo(said)
 
 
 @commands.command(
