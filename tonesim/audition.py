@@ -198,11 +198,12 @@ def audition(
         If the recording cannot be used.
     """
     tell = progress or (lambda share: None)
-    free = crossover_free(design, build_stage(design))
+    own_stage = build_stage(design)
+    free = crossover_free(design, own_stage)
     builders: tuple[Callable[[Design], Stage], ...] = (
-        build_stage,
+        lambda _: own_stage,
         lambda _: free.stage,
-        *((lambda d: linear(build_stage(d)),) if everything else ()),
+        *((lambda _: linear(own_stage),) if everything else ()),
     )
     info = recording.info
     channels = channels_of(info, options)

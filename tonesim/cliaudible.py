@@ -25,6 +25,7 @@ if TYPE_CHECKING:
     from tonesim.audition import Audition
     from tonesim.design import Design
     from tonesim.ear import Listening
+    from tonesim.report import RenderOptions
     from tonesim.settle import Candidate
 
 
@@ -95,16 +96,11 @@ def audible(
     frame by frame: a strict one may say inaudible, a lenient one audible; between them you listen.
     """
     from tonesim.audition import write_residual
-    from tonesim.ear import Listening
-    from tonesim.report import RenderOptions
     from tonesim.show import progress_bars
 
     if channel is not None and channel < 1:
         raise UsageError(f"--channel is {channel}, channels are counted from 1")
-    listening = Listening(
-        quantity("--spl", spl, "dB"),
-        None if room.lower() == "none" else quantity("--room", room, "dB"),
-    )
+    listening = _listening(spl, room)
     paths = [find_recording(name) for name in recordings]
     if csv_file is not None:
         check_text_output(csv_file, (source, parts_file, *map(str, paths)))
@@ -119,7 +115,7 @@ def audible(
     if residual is None:
         found = _audition_all(paths, design, listening, channel, repair)
     else:
-        options = RenderOptions(channel=None if channel is None else channel - 1, repair=repair)
+        options = _options(channel, repair)
         warn_of_compiling()
         with progress_bars(1000) as begin:
             found, clipped = write_residual(
@@ -199,13 +195,9 @@ def settle(
     series instead, by halving. Printed is the ladder with idle current, heat, distortion and
     margin of every rung, the least that suffices, its neighbours, and what heat does to it.
     """
-    from tonesim.ear import Listening
     from tonesim.settle import climb, halve
 
-    listening = Listening(
-        quantity("--spl", spl, "dB"),
-        None if room.lower() == "none" else quantity("--room", room, "dB"),
-    )
+    listening = _listening(spl, room)
     paths = [find_recording(name) for name in recordings]
     if saved is not None:
         check_text_output(saved, (source, parts_file, *map(str, paths)))
@@ -258,15 +250,31 @@ def _candidates(design: Design, given: dict[str, Any]) -> tuple[Candidate, ...]:
     return chain_ladder(design, drops, given["most"])
 
 
+def _listening(spl: str, room: str) -> Listening:
+    """Level and room as the options say."""
+    from tonesim.ear import Listening
+
+    return Listening(
+        quantity("--spl", spl, "dB"),
+        None if room.lower() == "none" else quantity("--room", room, "dB"),
+    )
+
+
+def _options(channel: int | None, repair: bool) -> RenderOptions:
+    """How the recordings are played; the channel is counted from 1."""
+    from tonesim.report import RenderOptions
+
+    return RenderOptions(channel=None if channel is None else channel - 1, repair=repair)
+
+
 def _audition_all(
     paths: list[Path], design: Design, listening: Listening, channel: int | None, repair: bool
 ) -> list[Audition]:
     from tonesim.audition import audition
-    from tonesim.report import RenderOptions
     from tonesim.show import progress_bars
     from tonesim.wav import open_recording
 
-    options = RenderOptions(channel=None if channel is None else channel - 1, repair=repair)
+    options = _options(channel, repair)
     lengths = []
     for path in paths:  # all that can be seen before the work begins
         with open_recording(path, repair=repair) as recording:
