@@ -20,6 +20,7 @@ from tonesim.command import (
     load,
     new_folder,
     played,
+    played_options,
     print_json,
     warn_of_compiling,
 )
@@ -48,15 +49,7 @@ __all__ = ["cliaudible", "clibench", "commands"]
 )
 @design_options
 @click.option("--channel", type=int, metavar="N", help="Only this channel, counted from 1.")
-@click.option(
-    "--cabinet",
-    metavar="CABINET",
-    help="A cabinet of the catalogue, an impulse response file, or none; by default the design's.",
-)
-@click.option(
-    "--full-scale", metavar="VOLTS", help="Peak volts at the jack that 0 dBFS stands for."
-)
-@click.option("--gain", metavar="DB", help="Clean gain before the stage, on top of the design's.")
+@played_options
 @click.option(
     "--match",
     type=float,

@@ -15,6 +15,7 @@ from tonesim.command import (
     find_recording,
     load,
     played,
+    played_options,
     print_json,
     quantity,
     warn_of_compiling,
@@ -53,15 +54,7 @@ if TYPE_CHECKING:
     help="Steady noise of the room, or none.",
 )
 @click.option("--channel", type=int, metavar="N", help="Only this channel, counted from 1.")
-@click.option(
-    "--cabinet",
-    metavar="CABINET",
-    help="A cabinet of the catalogue, an impulse response file, or none; by default the design's.",
-)
-@click.option(
-    "--full-scale", metavar="VOLTS", help="Peak volts at the jack that 0 dBFS stands for."
-)
-@click.option("--gain", metavar="DB", help="Clean gain before the stage, on top of the design's.")
+@played_options
 @click.option("--csv", "csv_file", metavar="FILE", help="Write every frame, a line each.")
 @click.option(
     "--residual",
@@ -172,9 +165,7 @@ def audible(
 @click.option("--between", metavar="LOW HIGH", nargs=2, help="Range of the value, as in 1k 3k3.")
 @click.option("--spl", metavar="DB", default="82", show_default=True, help="As for audible.")
 @click.option("--room", metavar="DBA", default="30", show_default=True, help="As for audible.")
-@click.option("--cabinet", metavar="CABINET", help="As for audible.")
-@click.option("--full-scale", metavar="VOLTS", help="As for audible.")
-@click.option("--gain", metavar="DB", help="As for audible.")
+@played_options
 @click.option("--save", "saved", metavar="FILE", help="Write the chosen design.")
 @as_json_option
 def settle(

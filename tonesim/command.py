@@ -117,6 +117,22 @@ def design_options(function: F) -> F:
     )(function)
 
 
+def played_options(function: F) -> F:
+    """Options of every command that plays a recording: drive and cabinet (see `played`)."""
+    function = click.option(
+        "--gain", metavar="DB", help="Clean gain before the stage, on top of the design's."
+    )(function)
+    function = click.option(
+        "--full-scale", metavar="VOLTS", help="Peak volts at the jack that 0 dBFS stands for."
+    )(function)
+    return click.option(
+        "--cabinet",
+        metavar="CABINET",
+        help="A cabinet of the catalogue, an impulse response file, or none; by default the "
+        "design's.",
+    )(function)
+
+
 as_json_option = click.option("--json", "as_json", is_flag=True, help="Print JSON instead of text.")
 
 
